@@ -1,0 +1,74 @@
+//! Kanayama, Kimura, Miyazaki and Noguchi, "A stable tracking control method for an autonomous mobile robot", ICRA 1990.
+//!
+//! With the error e = reference − pose in the robot's frame:
+//! v = v_d cos e_φ + k_x e_x, ω = ω_d + v_d k_y e_y + |v_d| k_φ sin e_φ.
+//! The paper has v_d on the last term; |v_d| makes it hold in reverse too. Linearised, the lateral motion has the natural
+//! frequency |v_d| √k_y and the damping k_φ/(2√k_y): its shape is fixed per metre travelled. At v_d = 0 there is no
+//! heading feedback.
+
+use super::{Domain, Input, Kind, Law};
+use crate::geometry::BodyVelocity;
+use crate::keys::{Bound, Key};
+use crate::math;
+use alloc::boxed::Box;
+
+pub(super) const KIND: Kind = Kind {
+    name: "kanayama",
+    gains: &[
+        Key::with_default(
+            "k_x",
+            "1/s",
+            1.0,
+            Bound::positive(100.0),
+            "feedback of the along-track error; too much of it with dead time makes the speed swing",
+        ),
+        Key::with_default(
+            "k_y",
+            "1/m²",
+            4.0,
+            Bound::positive(1000.0),
+            "feedback of the cross-track error; 1/√k_y is the distance in which it decays",
+        ),
+        Key::with_default(
+            "k_heading",
+            "1/m",
+            4.0,
+            Bound::positive(200.0),
+            "feedback of the heading error; critically damped at 2 √k_y, below it the machine weaves",
+        ),
+    ],
+    build: |gains| {
+        Ok(Box::new(Kanayama {
+            k_x: gains.get("k_x"),
+            k_y: gains.get("k_y"),
+            k_heading: gains.get("k_heading"),
+        }))
+    },
+};
+
+#[derive(Debug)]
+struct Kanayama {
+    k_x: f64,
+    k_y: f64,
+    k_heading: f64,
+}
+
+impl Law for Kanayama {
+    fn control(&self, input: &Input) -> BodyVelocity {
+        let wanted = input.reference.velocity;
+        let (e_x, e_y) = input.robot_frame_error_m();
+        // cos e_φ and sin e_φ by the addition theorem: both directions are known.
+        let error = input.reference.direction.relative_to(input.direction);
+        let speed = wanted.speed_m_s;
+        BodyVelocity {
+            speed_m_s: speed * error.cos + self.k_x * e_x,
+            turn_rate_rad_s: wanted.turn_rate_rad_s
+                + speed * self.k_y * e_y
+                + speed.abs() * self.k_heading * error.sin,
+        }
+    }
+
+    fn domain(&self) -> Domain {
+        Domain { max_heading_error_rad: math::PI, forward: true, reverse: true }
+    }
+}

@@ -1,0 +1,233 @@
+//! Orders and plans: start gates, stop, reset, and the acknowledgement each of them gets.
+
+use super::intake::Lease;
+use super::mode::{Trigger, Verdict, follow};
+use super::{Node, Sink};
+use crate::law::Input;
+use crate::plan::Plan;
+use crate::time::SpanNs;
+use alloc::boxed::Box;
+use alloc::string::String;
+use alloc::vec::Vec;
+use trackhold_proto::blob::{Digest, Text};
+use trackhold_proto::journal::{AckEffect, Body, Order, OrderEvent, PlanEvent, PlanLoaded};
+use trackhold_proto::message::Start;
+use trackhold_proto::words::{Cause, Mode, Refusal, StartAt, StopKind};
+
+/// Kind number of the message that carries a plan.
+const PLAN_KIND: u32 = 2;
+/// So many orders are remembered with their outcomes, for senders that repeat until they hear one.
+const REMEMBERED: usize = 16;
+
+/// The last orders and their outcomes.
+#[derive(Clone, Debug, Default)]
+pub(super) struct OrderMemory {
+    slots: [Option<Remembered>; REMEMBERED],
+    next: usize,
+}
+
+#[derive(Clone, Copy, Debug)]
+struct Remembered {
+    session: u64,
+    sequence: u64,
+    order: Order,
+    refusal: Option<Refusal>,
+}
+
+impl OrderMemory {
+    fn find(&self, event: &OrderEvent) -> Option<Remembered> {
+        let same = |slot: &&Remembered| slot.session == event.session && slot.sequence == event.sequence;
+        self.slots.iter().flatten().find(same).copied()
+    }
+
+    fn keep(&mut self, event: &OrderEvent, refusal: Option<Refusal>) {
+        let OrderEvent { session, sequence, order, .. } = *event;
+        self.slots[self.next] = Some(Remembered { session, sequence, order, refusal });
+        self.next = (self.next + 1) % REMEMBERED;
+    }
+}
+
+impl Node {
+    pub(super) fn order(&mut self, event: OrderEvent, sink: &mut impl Sink) {
+        self.emit(Body::Order(event), sink);
+        let known = self.orders.find(&event);
+        let refusal = match known {
+            // An emergency stop always acts: it is harmless twice, and the shell has sent zero already.
+            _ if event.order == Order::Stop(StopKind::Emergency) => self.emergency_stop(sink),
+            Some(known) if known.order == event.order => known.refusal,
+            Some(_) => Some(Refusal::SequenceReused),
+            None => match event.order {
+                Order::Start(start) => self.start(&start, sink).err(),
+                Order::Stop(_) => self.controlled_stop(sink).err(),
+                Order::Reset => self.reset(sink).err(),
+            },
+        };
+        if known.is_none() {
+            self.orders.keep(&event, refusal);
+        }
+        let plan = if let Order::Start(start) = event.order { start.plan } else { Digest::NONE };
+        let (session, sequence, order_kind) = (event.session, event.sequence, event.order.kind());
+        self.emit(
+            Body::Ack(AckEffect { session, sequence, order_kind, plan, refusal, findings: Vec::new() }),
+            sink,
+        );
+    }
+
+    pub(super) fn plan_arrived(
+        &mut self,
+        event: PlanEvent,
+        compiled: Result<Box<Plan>, Vec<String>>,
+        sink: &mut impl Sink,
+    ) {
+        let (session, sequence, digest) = (event.session, event.sequence, event.digest);
+        self.emit(Body::Plan(event), sink);
+        let (refusal, findings) = match (self.admit_plan(session, digest), compiled) {
+            (Ok(true), Ok(plan)) => {
+                self.load(plan, sink);
+                (None, Vec::new())
+            }
+            (Ok(false), Ok(same)) => {
+                sink.retire(same);
+                (None, Vec::new())
+            }
+            (Ok(_), Err(findings)) => (Some(Refusal::PlanUnfit), findings),
+            (Err(refusal), compiled) => {
+                if let Ok(plan) = compiled {
+                    sink.retire(plan);
+                }
+                (Some(refusal), Vec::new())
+            }
+        };
+        if refusal.is_none() {
+            self.planner = Some(Lease { holder: session, renewed: self.at });
+        }
+        let ack = AckEffect { session, sequence, order_kind: PLAN_KIND, plan: digest, refusal, findings };
+        self.emit(Body::Ack(ack), sink);
+    }
+
+    /// Whether a plan may be loaded; false if it is loaded already.
+    fn admit_plan(&self, session: u64, digest: Digest) -> Result<bool, Refusal> {
+        if let Some(planner) = self.planner {
+            planner.admits(session, self.at, self.params.planner_lease)?;
+        }
+        if self.plan.as_ref().is_some_and(|plan| plan.digest() == digest) {
+            return Ok(false);
+        }
+        match self.mode {
+            Mode::Tracking | Mode::ControlledStop => Err(Refusal::Mode { mode: self.mode }),
+            _ => Ok(true),
+        }
+    }
+
+    fn load(&mut self, plan: Box<Plan>, sink: &mut impl Sink) {
+        let loaded = PlanLoaded {
+            digest: plan.digest(),
+            id: Text::cut(plan.id()),
+            revision: plan.revision(),
+            open: plan.is_open(),
+            duration_ns: plan.duration().0,
+            length_m: plan.length_m(),
+        };
+        if let Some(old) = self.plan.replace(plan) {
+            sink.retire(old);
+        }
+        self.run.begin(SpanNs(0), self.at);
+        self.emit(Body::PlanLoaded(loaded), sink);
+    }
+
+    fn start(&mut self, start: &Start, sink: &mut impl Sink) -> Result<(), Refusal> {
+        let begin = self.pass_start_gates(start)?;
+        self.law.reset();
+        self.run.begin(begin, self.at);
+        let change = self.change(Trigger::Start, Cause::Operator);
+        self.emit_change(change, sink);
+        Ok(())
+    }
+
+    /// Every gate of a start, in the order in which a person would mend them; returns the plan time to begin at.
+    fn pass_start_gates(&self, start: &Start) -> Result<SpanNs, Refusal> {
+        if follow(self.mode, Trigger::Start) == Verdict::Refused {
+            return Err(Refusal::Mode { mode: self.mode });
+        }
+        if start.boot != self.boot {
+            return Err(Refusal::Boot);
+        }
+        let plan = self.plan.as_deref().ok_or(Refusal::NoPlan)?;
+        if start.plan != plan.digest() {
+            return Err(Refusal::PlanDigest);
+        }
+        if start.start_number != self.numbers.current {
+            return Err(Refusal::StartNumber);
+        }
+        let domain = self.law.domain();
+        if let Some(reverse) = domain.unfit_direction(plan.travel()) {
+            return Err(Refusal::LawDirection { reverse });
+        }
+        let estimate = self.poses.estimate().ok_or(Refusal::NoPose)?;
+        let age = estimate.staleness(self.at);
+        if age > self.params.pose_timeout {
+            return Err(Refusal::StalePose { age_ns: age.0, limit_ns: self.params.pose_timeout.0 });
+        }
+        let begin = begin_time(start, plan, estimate.pose)?;
+        let input = Input::new(plan.at(begin.seconds(), &mut 0), estimate.pose);
+        let distance_m = input.pose.distance_to(input.reference.pose);
+        if distance_m > self.params.start_distance_m {
+            return Err(Refusal::TooFar { distance_m, limit_m: self.params.start_distance_m });
+        }
+        let limit_rad = self.params.start_heading_rad.min(domain.max_heading_error_rad);
+        let heading_error_rad = input.error.heading_rad;
+        if heading_error_rad.abs() > limit_rad {
+            return Err(Refusal::TurnedAway { heading_error_rad, limit_rad });
+        }
+        Ok(begin)
+    }
+
+    fn emergency_stop(&mut self, sink: &mut impl Sink) -> Option<Refusal> {
+        let change = self.change(Trigger::EmergencyStop, Cause::Operator);
+        self.command_zero(sink);
+        self.emit_change(change, sink);
+        None
+    }
+
+    fn controlled_stop(&mut self, sink: &mut impl Sink) -> Result<(), Refusal> {
+        let change = self.change(Trigger::ControlledStop, Cause::Operator);
+        self.emit_change(change, sink);
+        Ok(())
+    }
+
+    fn reset(&mut self, sink: &mut impl Sink) -> Result<(), Refusal> {
+        if follow(self.mode, Trigger::Reset) == Verdict::Refused {
+            return Err(Refusal::Mode { mode: self.mode });
+        }
+        if self.mode == Mode::ProtectiveStop && self.cause_remains() {
+            return Err(Refusal::CauseRemains { cause: self.cause });
+        }
+        let change = self.change(Trigger::Reset, Cause::Operator);
+        self.emit_change(change, sink);
+        Ok(())
+    }
+
+    /// Whether what tripped a protective stop is still there. Causes that only a run can show count as gone: the start's
+    /// gates look at them again.
+    fn cause_remains(&self) -> bool {
+        match self.cause {
+            Cause::StalePose => self
+                .poses
+                .estimate()
+                .is_none_or(|estimate| estimate.staleness(self.at) > self.params.pose_timeout),
+            Cause::Shutdown => true,
+            _ => false,
+        }
+    }
+}
+
+fn begin_time(start: &Start, plan: &Plan, pose: crate::geometry::Pose) -> Result<SpanNs, Refusal> {
+    match start.at {
+        StartAt::Beginning => Ok(SpanNs(0)),
+        StartAt::Nearest => Ok(SpanNs::from_seconds(plan.nearest_time_s(pose))),
+        StartAt::PlanTime if start.plan_time_ns > plan.duration().0 => {
+            Err(Refusal::PlanTime { plan_time_ns: start.plan_time_ns, duration_ns: plan.duration().0 })
+        }
+        StartAt::PlanTime => Ok(SpanNs(start.plan_time_ns)),
+    }
+}

@@ -1,0 +1,184 @@
+//! The node's own numbers: keys of the section `node`.
+
+use crate::keys::{Bound, Key, Problem, Values};
+use crate::math::PI;
+use crate::time::SpanNs;
+use alloc::format;
+use alloc::vec::Vec;
+
+/// Keys of the section `node`.
+pub const KEYS: &[Key] = &[
+    Key::with_default(
+        "rate_hz",
+        "Hz",
+        50.0,
+        Bound::within(10.0, 1000.0),
+        "ticks a second; a slow tick adds to the dead time of the loop",
+    ),
+    Key::with_default(
+        "pose_timeout_s",
+        "s",
+        0.25,
+        Bound::within(0.002, 5.0),
+        "a pose older than this stops the machine; at least three of the estimator's periods, or every lost datagram stops it",
+    ),
+    Key::with_default(
+        "pose_lease_s",
+        "s",
+        1.0,
+        Bound::within(0.01, 60.0),
+        "after the last pose of one estimator, another one's are refused for this long",
+    ),
+    Key::with_default(
+        "pose_slack_m",
+        "m",
+        0.1,
+        Bound::within(0.0, 100.0),
+        "a pose that lies this much farther from the one before than the top speed allows is flagged as implausible",
+    ),
+    Key::with_default(
+        "planner_lease_s",
+        "s",
+        2.0,
+        Bound::within(0.0, 600.0),
+        "after the last plan of one planner, another one's are refused for this long",
+    ),
+    Key::with_default(
+        "clock_window_s",
+        "s",
+        10.0,
+        Bound::within(0.1, 3600.0),
+        "how long a least delay counts towards a sender's clock offset; a short one follows a drifting clock sooner",
+    ),
+    Key::with_default(
+        "command_validity_s",
+        "s",
+        0.2,
+        Bound::within(0.002, 2.0),
+        "the drive goes to zero by itself when nothing newer came for this long",
+    ),
+    Key::with_default(
+        "stall_periods",
+        "",
+        5.0,
+        Bound::within(2.0, 100.0),
+        "the supervisor stops the machine when no tick came for this many periods",
+    ),
+    Key::with_default(
+        "start_distance_m",
+        "m",
+        2.0,
+        Bound::positive(1000.0),
+        "a start farther from the reference than this is refused",
+    ),
+    Key::with_default(
+        "start_heading_rad",
+        "rad",
+        PI,
+        Bound::positive(PI),
+        "a start turned farther from the reference than this is refused; the law's own domain counts too",
+    ),
+    Key::with_default(
+        "controlled_stop_share",
+        "",
+        0.7,
+        Bound::within(0.05, 1.0),
+        "the share of the machine's deceleration that a controlled stop uses; the rest keeps it on the path",
+    ),
+    Key::with_default(
+        "protective_ramp_s",
+        "s",
+        0.0,
+        Bound::within(0.0, 5.0),
+        "a protective stop ramps to zero in this time; 0 is zero at once",
+    ),
+    Key::with_default(
+        "settle_time_s",
+        "s",
+        2.0,
+        Bound::within(0.0, 60.0),
+        "how long the law may settle on the final pose after the plan's end",
+    ),
+    Key::with_default(
+        "settle_speed_m_s",
+        "m/s",
+        0.002,
+        Bound::positive(1.0),
+        "the final pose is reached when the law wants less than this speed and turn rate",
+    ),
+    Key::with_default(
+        "settle_turn_rate_rad_s",
+        "rad/s",
+        0.005,
+        Bound::positive(1.0),
+        "the final pose is reached when the law wants less than this speed and turn rate",
+    ),
+];
+
+/// The node's numbers, checked. The keys' meanings are in [`KEYS`].
+#[derive(Clone, Debug, PartialEq)]
+#[expect(
+    missing_docs,
+    reason = "each field is the key of the same name; KEYS tells its meaning, unit and bound"
+)]
+pub struct Params {
+    pub rate_hz: f64,
+    pub pose_timeout: SpanNs,
+    pub pose_lease: SpanNs,
+    pub pose_slack_m: f64,
+    pub planner_lease: SpanNs,
+    pub clock_window: SpanNs,
+    pub command_validity: SpanNs,
+    pub stall_periods: f64,
+    pub start_distance_m: f64,
+    pub start_heading_rad: f64,
+    pub controlled_stop_share: f64,
+    pub protective_ramp: SpanNs,
+    pub settle_time: SpanNs,
+    pub settle_speed_m_s: f64,
+    pub settle_turn_rate_rad_s: f64,
+}
+
+impl Params {
+    /// From values checked against [`KEYS`].
+    ///
+    /// # Errors
+    /// Values that do not go together.
+    pub fn new(values: &Values) -> Result<Self, Vec<Problem>> {
+        let span = |key: &str| SpanNs::from_seconds(values.get(key));
+        let params = Self {
+            rate_hz: values.get("rate_hz"),
+            pose_timeout: span("pose_timeout_s"),
+            pose_lease: span("pose_lease_s"),
+            pose_slack_m: values.get("pose_slack_m"),
+            planner_lease: span("planner_lease_s"),
+            clock_window: span("clock_window_s"),
+            command_validity: span("command_validity_s"),
+            stall_periods: values.get("stall_periods"),
+            start_distance_m: values.get("start_distance_m"),
+            start_heading_rad: values.get("start_heading_rad"),
+            controlled_stop_share: values.get("controlled_stop_share"),
+            protective_ramp: span("protective_ramp_s"),
+            settle_time: span("settle_time_s"),
+            settle_speed_m_s: values.get("settle_speed_m_s"),
+            settle_turn_rate_rad_s: values.get("settle_turn_rate_rad_s"),
+        };
+        let mut problems = Vec::new();
+        for (key, periods) in [("command_validity_s", 2.0), ("pose_timeout_s", 1.0)] {
+            let (value, least) = (values.get(key), periods / params.rate_hz);
+            if value < least {
+                let what = format!(
+                    "{value} s is shorter than {periods} periods at node.rate_hz = {}, give at least {least} s",
+                    params.rate_hz
+                );
+                problems.push(Problem::new(key, what));
+            }
+        }
+        if problems.is_empty() { Ok(params) } else { Err(problems) }
+    }
+
+    /// The tick's period, s.
+    pub fn period_s(&self) -> f64 {
+        1.0 / self.rate_hz
+    }
+}

@@ -1,0 +1,172 @@
+//! One control period: guards, reference, law, limits, record.
+
+use super::mode::Trigger;
+use super::{Node, Sink};
+use crate::geometry::{BodyVelocity, Pose};
+use crate::law::Input;
+use crate::plan::Reference;
+use crate::time::{SpanNs, TimeNs};
+use crate::vehicle::limit;
+use trackhold_proto::journal::{Body, ModeChange, TickRecord, flag};
+use trackhold_proto::words::{Cause, Mode};
+
+impl Node {
+    pub(super) fn tick(&mut self, sink: &mut impl Sink) {
+        let at = self.at;
+        let seconds = self.step_seconds(at);
+        let mut record = TickRecord::blank(self.vehicle.layout());
+        record.flags = self.poses.take_warnings();
+        let pose = self.see_pose(at, &mut record);
+        let mut change = None;
+        match self.mode {
+            Mode::Standby | Mode::EmergencyStop => self.wheels = self.vehicle.zero(&self.wheels),
+            Mode::ProtectiveStop => self.wheels = self.protective_wheels(at),
+            Mode::Tracking | Mode::ControlledStop => {
+                change = self.follow_plan(at, seconds, pose, &mut record)
+            }
+        }
+        record.tick = self.ticks;
+        record.at_ns = at.0;
+        record.mode = self.mode;
+        record.cause = self.cause;
+        record.start_number = self.numbers.current;
+        record.plan_time_ns = self.run.plan_time().0;
+        record.plan_rate = self.run.rate();
+        record.command = self.command();
+        self.ticks += 1;
+        self.last_tick = Some(at);
+        self.emit(Body::Tick(record), sink);
+        self.emit_change(change, sink);
+    }
+
+    /// The time over which the limits count: a late tick may not step farther than a punctual one, an early one only as
+    /// far as its time allows.
+    fn step_seconds(&self, at: TimeNs) -> f64 {
+        let period = self.params.period_s();
+        self.last_tick.map_or(period, |last| at.since(last).seconds().min(period))
+    }
+
+    /// Notes the pose in the record, and returns it if it is fresh.
+    fn see_pose(&self, at: TimeNs, record: &mut TickRecord) -> Option<Pose> {
+        let Some(estimate) = self.poses.estimate() else {
+            record.flags |= flag::POSE_STALE;
+            return None;
+        };
+        let pose = estimate.pose;
+        (record.x_m, record.y_m, record.heading_rad) = (pose.x_m, pose.y_m, pose.heading_rad);
+        record.pose_age_ns = estimate.age(at).0;
+        record.clock_offset_ns = estimate.clock_offset_ns;
+        record.flags |= flag::HAS_POSE;
+        if estimate.staleness(at) > self.params.pose_timeout {
+            record.flags |= flag::POSE_STALE;
+            return None;
+        }
+        Some(pose)
+    }
+
+    fn follow_plan(
+        &mut self,
+        at: TimeNs,
+        seconds: f64,
+        pose: Option<Pose>,
+        record: &mut TickRecord,
+    ) -> Option<ModeChange> {
+        self.run.advance(at);
+        let Some(pose) = pose else { return self.guard_protective(at, Cause::StalePose) };
+        let Some(reference) = self.next_reference(seconds) else {
+            unreachable!("a start needs a plan, and none is taken away while one is followed")
+        };
+        let input = Input::new(reference, pose);
+        fill_reference(record, &input);
+        if input.error.heading_rad.abs() > self.law.domain().max_heading_error_rad {
+            record.flags |= flag::OUTSIDE_LAW_DOMAIN;
+            return self.guard_protective(at, Cause::OutsideLawDomain);
+        }
+        let wanted = self.wanted(&input, record);
+        if !wanted.is_finite() {
+            record.flags |= flag::LAW_NOT_FINITE;
+            return self.guard_protective(at, Cause::LawNotFinite);
+        }
+        record.wanted_speed_m_s = wanted.speed_m_s;
+        record.wanted_turn_rate_rad_s = wanted.turn_rate_rad_s;
+        let limited = limit(&*self.vehicle, wanted, reference.curvature_1_m, &self.wheels, seconds);
+        self.law.settle(&input, limited.speed_limited || limited.step_limited, self.params.period_s());
+        record.flags |= if limited.speed_limited { flag::SPEED_LIMITED } else { 0 };
+        record.flags |= if limited.step_limited { flag::STEP_LIMITED } else { 0 };
+        self.wheels = limited.wheels;
+        self.end_of_run(limited.body, record)
+    }
+
+    /// The reference of this tick; a controlled stop slows the plan's time first.
+    fn next_reference(&mut self, seconds: f64) -> Option<Reference> {
+        let plan = self.plan.as_deref()?;
+        if self.mode == Mode::ControlledStop {
+            self.run.ramp_down(plan, &*self.vehicle, self.params.controlled_stop_share, seconds);
+        }
+        Some(self.run.reference(plan))
+    }
+
+    /// What the law wants, or zero once the run comes to rest.
+    fn wanted(&mut self, input: &Input, record: &mut TickRecord) -> BodyVelocity {
+        let wanted = if self.run.coming_to_rest { BodyVelocity::ZERO } else { self.law.control(input) };
+        if let Some(since_end) = self.past_end().filter(|_| self.mode == Mode::Tracking) {
+            record.flags |= flag::SETTLING;
+            self.run.settle(wanted, since_end, &self.params);
+        }
+        if self.run.coming_to_rest { BodyVelocity::ZERO } else { wanted }
+    }
+
+    /// How long ago a closed plan ended.
+    fn past_end(&self) -> Option<SpanNs> {
+        let plan = self.plan.as_deref().filter(|plan| !plan.is_open())?;
+        let (reached, duration) = (self.run.plan_time(), plan.duration());
+        (reached >= duration).then(|| reached - duration)
+    }
+
+    /// Whether the run is over, or an open plan has run dry.
+    fn end_of_run(&mut self, body: BodyVelocity, record: &mut TickRecord) -> Option<ModeChange> {
+        if self.run.coming_to_rest && body.is_zero() {
+            let cause = match (self.mode, self.run.settled_late) {
+                (Mode::ControlledStop, _) => Cause::RampEnded,
+                (_, true) => Cause::NotSettled,
+                (_, false) => Cause::PlanEnded,
+            };
+            return self.change(Trigger::CameToRest, cause);
+        }
+        let dry = self
+            .plan
+            .as_deref()
+            .is_some_and(|plan| plan.is_open() && self.run.plan_time() >= plan.duration());
+        if dry && self.mode == Mode::Tracking {
+            record.flags |= flag::PLAN_DRY;
+            return self.change(Trigger::GuardControlled, Cause::PlanRanDry);
+        }
+        None
+    }
+
+    fn guard_protective(&mut self, at: TimeNs, cause: Cause) -> Option<ModeChange> {
+        let change = self.change(Trigger::GuardProtective, cause);
+        if self.params.protective_ramp > SpanNs(0) {
+            self.run.begin_ramp(at, self.wheels);
+        }
+        self.wheels = self.protective_wheels(at);
+        change
+    }
+
+    fn protective_wheels(&mut self, at: TimeNs) -> crate::vehicle::Wheels {
+        self.run.protective(at, &*self.vehicle, &self.wheels, &self.params)
+    }
+}
+
+fn fill_reference(record: &mut TickRecord, input: &Input) {
+    let Reference { pose, velocity, .. } = input.reference;
+    record.flags |= flag::HAS_REFERENCE;
+    (record.ref_x_m, record.ref_y_m, record.ref_heading_rad) = (pose.x_m, pose.y_m, pose.heading_rad);
+    record.ref_speed_m_s = velocity.speed_m_s;
+    record.ref_turn_rate_rad_s = velocity.turn_rate_rad_s;
+    record.ref_curvature_1_m = input.reference.curvature_1_m;
+    record.ref_accel_m_s2 = input.reference.accel_m_s2;
+    record.along_error_m = input.error.along_m;
+    record.cross_error_m = input.error.cross_m;
+    record.heading_error_rad = input.error.heading_rad;
+}

@@ -1,0 +1,152 @@
+//! From a plan file's bytes to a plan that answers for every instant: a pure function of bytes and machine.
+
+use super::file::{FORMAT, RawPlan, RawSegment, read};
+use super::segment::{Joint, KINDS, Stretch};
+use super::{Plan, Reference, Slot, brake, nearest};
+use crate::digest;
+use crate::geometry::Pose;
+use crate::keys::Problem;
+use crate::math;
+use crate::vehicle::Vehicle;
+use alloc::boxed::Box;
+use alloc::format;
+use alloc::string::{String, ToString};
+use alloc::vec;
+use alloc::vec::Vec;
+
+/// No coordinate of a plan lies farther from the origin, m. Beyond, a double's last bit is a nanometre no more.
+const MAX_COORDINATE_M: f64 = 1e7;
+/// Most segments in a plan.
+const MAX_SEGMENTS: usize = 100_000;
+/// Longest id, bytes.
+const MAX_ID_BYTES: usize = 64;
+/// A refusal lists no more than this many findings: the first ones tell what to mend.
+const MAX_FINDINGS: usize = 20;
+
+/// Compiles a plan for a machine.
+///
+/// # Errors
+/// What is wrong with it, a line each: place, value, limit, unit.
+pub fn compile(raw: &[u8], vehicle: &dyn Vehicle) -> Result<Plan, Vec<String>> {
+    let file = read(raw).map_err(|error| vec![format!("not a plan file: {error}")])?;
+    let mut findings = check_head(&file);
+    let mut joint = Joint {
+        pose: Pose::new(file.start.x_m, file.start.y_m, math::wrap(file.start.heading_rad)),
+        curvature_1_m: 0.0,
+    };
+    let mut slots = Vec::with_capacity(file.segments.len());
+    for (index, segment) in file.segments.iter().enumerate() {
+        let place = format!("segments[{index}] ({})", segment.kind);
+        match build(segment, joint) {
+            Ok(stretch) => {
+                findings.extend(stretch.first_excess(vehicle).map(|(at_s, excess)| {
+                    format!("{place}: {at_s:.3} s after its beginning it asks for {excess}: slow down or turn wider")
+                }));
+                let end = stretch.at(stretch.duration_s());
+                joint = Joint { pose: end.pose, curvature_1_m: end.curvature_1_m };
+                slots.push(Slot { begin_s: 0.0, stretch, brake: None });
+            }
+            Err(problems) => findings.extend(problems.iter().map(|problem| format!("{place}.{problem}"))),
+        }
+        if findings.len() >= MAX_FINDINGS {
+            break;
+        }
+    }
+    if !findings.is_empty() {
+        findings.truncate(MAX_FINDINGS);
+        return Err(findings);
+    }
+    finish(&file, slots, vehicle, digest::of_bytes(raw)).map_err(|finding| vec![finding])
+}
+
+fn check_head(file: &RawPlan) -> Vec<String> {
+    let mut findings = Vec::new();
+    if file.format != FORMAT {
+        findings.push(format!("format: {:?}, this program reads {FORMAT:?}", file.format));
+    }
+    if file.id.is_empty() || file.id.len() > MAX_ID_BYTES {
+        findings.push(format!("id: {} bytes long, give 1 to {MAX_ID_BYTES}", file.id.len()));
+    }
+    if file.segments.is_empty() || file.segments.len() > MAX_SEGMENTS {
+        findings.push(format!("segments: {} of them, give 1 to {MAX_SEGMENTS}", file.segments.len()));
+    }
+    for (name, value) in
+        [("x_m", file.start.x_m), ("y_m", file.start.y_m), ("heading_rad", file.start.heading_rad)]
+    {
+        if value.abs() > MAX_COORDINATE_M {
+            findings.push(format!("start.{name}: {value} lies outside ±{MAX_COORDINATE_M}"));
+        }
+    }
+    findings
+}
+
+fn build(segment: &RawSegment, joint: Joint) -> Result<Box<dyn Stretch>, Vec<Problem>> {
+    let Some(kind) = KINDS.iter().find(|kind| kind.name == segment.kind) else {
+        let known: Vec<&str> = KINDS.iter().map(|kind| kind.name).collect();
+        return Err(vec![Problem::new("kind", format!("no such segment; known are {}", known.join(", ")))]);
+    };
+    let mut problems = Vec::new();
+    if segment.reverse && !kind.reversible {
+        problems.push(Problem::new(
+            "reverse",
+            format!("a {} has no direction of travel; leave it out", kind.name),
+        ));
+    }
+    match (&segment.points, kind.has_points) {
+        (Some(_), false) => {
+            problems.push(Problem::new("points", format!("a {} has no points; leave them out", kind.name)));
+        }
+        (None, true) => problems.push(Problem::new("points", "missing; give at least two")),
+        _ => {}
+    }
+    let values = match segment.numbers.checked(kind.keys) {
+        Ok(values) => values,
+        Err(more) => {
+            problems.extend(more);
+            return Err(problems);
+        }
+    };
+    if !problems.is_empty() {
+        return Err(problems);
+    }
+    (kind.build)(segment, &values, joint)
+}
+
+fn finish(
+    file: &RawPlan,
+    mut slots: Vec<Slot>,
+    vehicle: &dyn Vehicle,
+    digest: trackhold_proto::blob::Digest,
+) -> Result<Plan, String> {
+    if !file.open {
+        brake::bring_to_rest(&mut slots, vehicle);
+    }
+    let mut begin_s = 0.0;
+    for slot in &mut slots {
+        slot.begin_s = begin_s;
+        begin_s += slot.duration_s();
+    }
+    let last = &slots[slots.len() - 1];
+    let mut end = last.at(last.duration_s());
+    if !file.open {
+        end = Reference::at_rest(end.pose, end.curvature_1_m);
+    }
+    if !(end.pose.x_m.abs() <= MAX_COORDINATE_M && end.pose.y_m.abs() <= MAX_COORDINATE_M) {
+        return Err(format!(
+            "the path ends beyond ±{MAX_COORDINATE_M} m; move the site frame's origin nearer"
+        ));
+    }
+    let mut plan = Plan {
+        id: file.id.to_string(),
+        revision: file.revision,
+        open: file.open,
+        digest,
+        length_m: slots.iter().map(|slot| slot.stretch.path_length_m()).sum(),
+        slots,
+        duration_s: begin_s,
+        end,
+        milestones: Vec::new(),
+    };
+    plan.milestones = nearest::milestones(&plan);
+    Ok(plan)
+}
