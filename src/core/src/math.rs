@@ -29,6 +29,16 @@ pub fn sqrt(value: f64) -> f64 {
     libm::sqrt(value)
 }
 
+/// The exponential function.
+pub fn exp(value: f64) -> f64 {
+    libm::exp(value)
+}
+
+/// Natural logarithm.
+pub fn ln(value: f64) -> f64 {
+    libm::log(value)
+}
+
 /// Length of the vector (x, y).
 pub fn length(x: f64, y: f64) -> f64 {
     sqrt(x * x + y * y)

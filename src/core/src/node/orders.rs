@@ -3,6 +3,7 @@
 use super::intake::Lease;
 use super::mode::{Trigger, Verdict, follow};
 use super::{Node, Sink};
+use crate::geometry::Pose;
 use crate::law::Input;
 use crate::plan::Plan;
 use crate::time::SpanNs;
@@ -168,7 +169,7 @@ impl Node {
         if age > self.params.pose_timeout {
             return Err(Refusal::StalePose { age_ns: age.0, limit_ns: self.params.pose_timeout.0 });
         }
-        let begin = begin_time(start, plan, estimate.pose)?;
+        let begin = begin_time(start, plan, estimate.pose, self.run.plan_time())?;
         let input = Input::new(plan.at(begin.seconds(), &mut 0), estimate.pose);
         let distance_m = input.pose.distance_to(input.reference.pose);
         if distance_m > self.params.start_distance_m {
@@ -221,10 +222,10 @@ impl Node {
     }
 }
 
-fn begin_time(start: &Start, plan: &Plan, pose: crate::geometry::Pose) -> Result<SpanNs, Refusal> {
+fn begin_time(start: &Start, plan: &Plan, pose: Pose, reached: SpanNs) -> Result<SpanNs, Refusal> {
     match start.at {
         StartAt::Beginning => Ok(SpanNs(0)),
-        StartAt::Nearest => Ok(SpanNs::from_seconds(plan.nearest_time_s(pose))),
+        StartAt::Nearest => Ok(SpanNs::from_seconds(plan.nearest_time_s(pose, reached.seconds()))),
         StartAt::PlanTime if start.plan_time_ns > plan.duration().0 => {
             Err(Refusal::PlanTime { plan_time_ns: start.plan_time_ns, duration_ns: plan.duration().0 })
         }

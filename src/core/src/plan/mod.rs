@@ -197,9 +197,10 @@ impl Plan {
         self.slots.partition_point(|slot| slot.begin_s <= t_s).saturating_sub(1)
     }
 
-    /// The plan time at which the plan passes nearest to `pose`, heading included. Bounded work, no allocation.
-    pub fn nearest_time_s(&self, pose: Pose) -> f64 {
-        nearest::time_s(self, &self.milestones, pose)
+    /// The plan time at which the plan passes nearest to `pose`, heading included; of several passages the one nearest to
+    /// the plan time `reached_s`. Bounded work, no allocation.
+    pub fn nearest_time_s(&self, pose: Pose, reached_s: f64) -> f64 {
+        nearest::time_s(self, &self.milestones, pose, reached_s)
     }
 }
 

@@ -224,8 +224,19 @@ fn the_nearest_time_finds_the_branch_the_machine_points_along() {
     let plan = closed(eight);
     for t in [0.7, 5.123, 11.0, 14.0, 15.0] {
         let reference = at(&plan, t);
-        let found = plan.nearest_time_s(reference.pose);
+        let found = plan.nearest_time_s(reference.pose, t);
         assert!((found - t).abs() < 1e-4, "{t}: found {found}");
+    }
+}
+
+#[test]
+fn the_nearest_time_keeps_to_the_lap_it_was_on() {
+    let plan = closed(r#"{"kind":"arc","radius_m":2,"turn_rad":60,"speed_m_s":1}"#);
+    let lap_s = 2.0 * math::TAU;
+    for lap in [0.0, 3.0, 7.0] {
+        let place = at(&plan, lap * lap_s + 5.0).pose;
+        let found = plan.nearest_time_s(place, lap * lap_s + 3.0);
+        assert!((found - lap * lap_s - 5.0).abs() < 1e-3, "lap {lap}: {found}");
     }
 }
 
