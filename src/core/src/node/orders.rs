@@ -92,12 +92,12 @@ impl Node {
                 (None, Vec::new())
             }
             (Ok(_), Err(findings)) => (Some(Refusal::PlanUnfit), findings),
-            (Err(refusal), compiled) => {
-                if let Ok(plan) = compiled {
-                    sink.retire(plan);
-                }
+            (Err(refusal), Ok(plan)) => {
+                sink.retire(plan);
                 (Some(refusal), Vec::new())
             }
+            // The findings go out too: to drop them here would free memory within the loop.
+            (Err(refusal), Err(findings)) => (Some(refusal), findings),
         };
         if refusal.is_none() {
             self.planner = Some(Lease { holder: session, renewed: self.at });

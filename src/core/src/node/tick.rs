@@ -40,10 +40,12 @@ impl Node {
     }
 
     /// The time over which the limits count: a late tick may not step farther than a punctual one, an early one only as
-    /// far as its time allows.
+    /// far as its time allows. Ticks fall on whole nanoseconds, so one that is early by less than that is punctual.
     fn step_seconds(&self, at: TimeNs) -> f64 {
         let period = self.params.period_s();
-        self.last_tick.map_or(period, |last| at.since(last).seconds().min(period))
+        let Some(last) = self.last_tick else { return period };
+        let elapsed = at.since(last);
+        if (elapsed + SpanNs(1)).seconds() >= period { period } else { elapsed.seconds() }
     }
 
     /// Notes the pose in the record, and returns it if it is fresh.
