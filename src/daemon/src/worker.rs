@@ -1,0 +1,83 @@
+//! The plan worker: checks a plan's digest, compiles it, and frees what the loop is done with. Nothing waits for it.
+
+use crate::intake::transfer::Whole;
+use crate::lanes::{Bell, Shared, Waste};
+use crate::mail::{Letter, Mail, OrderKey};
+use rtrb::{Consumer, Producer, PushError};
+use std::sync::Arc;
+use std::sync::atomic::Ordering::SeqCst;
+use std::sync::mpsc::{Receiver, RecvTimeoutError};
+use std::time::Duration;
+use trackhold_core::digest;
+use trackhold_core::node::Event;
+use trackhold_core::plan::compile;
+use trackhold_core::vehicle::Vehicle;
+use trackhold_proto::journal::PlanEvent;
+
+/// Kind number of the message that carries a plan.
+pub const PLAN_KIND: u32 = 2;
+/// How often the loop's waste is freed while no plan comes.
+const SWEEP: Duration = Duration::from_millis(50);
+/// How long to wait before trying a full queue again.
+const RETRY: Duration = Duration::from_millis(1);
+
+/// The worker.
+#[derive(Debug)]
+pub struct Worker {
+    /// The machine that plans have to fit.
+    pub vehicle: Arc<dyn Vehicle>,
+    /// Plans to the loop.
+    pub plans: Producer<Event>,
+    /// What the loop is done with.
+    pub waste: Consumer<Waste>,
+    /// Wakes the loop.
+    pub bell: Arc<Bell>,
+    /// Tells the publisher of plans that go no farther.
+    pub mail: Mail,
+    /// Tells when to end.
+    pub shared: Arc<Shared>,
+}
+
+impl Worker {
+    /// Works until the intake has ended.
+    pub fn run(mut self, jobs: &Receiver<Whole>) {
+        loop {
+            let job = jobs.recv_timeout(SWEEP);
+            while self.waste.pop().is_ok() {}
+            match job {
+                Ok(whole) => self.work(whole),
+                Err(RecvTimeoutError::Timeout) => {}
+                Err(RecvTimeoutError::Disconnected) => return,
+            }
+        }
+    }
+
+    fn work(&mut self, whole: Whole) {
+        let Whole { session, sequence, digest, raw } = whole;
+        let found = digest::of_bytes(&raw);
+        if found != digest {
+            let text = format!(
+                "the plan's {} bytes have the SHA-256 {found}, their parts state {digest}",
+                raw.len()
+            );
+            let order = OrderKey { session, sequence, kind: PLAN_KIND };
+            self.mail.post(Letter::PlanBroken { order, digest, text });
+            return;
+        }
+        let compiled = compile(&raw, &*self.vehicle).map(Box::new);
+        self.push(Event::Plan(PlanEvent { session, sequence, digest, raw }, compiled));
+    }
+
+    /// The worker may wait for room; the loop never does.
+    fn push(&mut self, event: Event) {
+        let mut event = event;
+        while let Err(PushError::Full(back)) = self.plans.push(event) {
+            if self.shared.shell_ends.load(SeqCst) {
+                return;
+            }
+            event = back;
+            std::thread::sleep(RETRY);
+        }
+        self.bell.ring();
+    }
+}
