@@ -164,7 +164,7 @@ static void test_refusals(void)
 static th_drive drive;
 static th_output output;
 
-static void begin(uint32_t layout)
+static void power_up(uint32_t layout)
 {
     th_drive_config config = {0, {10.0, 10.0}, 500 * MS, 3000};
     config.layout = layout;
@@ -184,6 +184,13 @@ static th_taken command_at(uint64_t now_ms, uint64_t session, uint64_t sequence,
     return th_drive_on_datagram(&drive, now_ms * MS, bytes, length);
 }
 
+/* A drive that has begun session 1 with the zero that has to come first. */
+static void begin(uint32_t layout)
+{
+    power_up(layout);
+    CHECK(command_at(0, 1, 0, 0, 0) == TH_TAKEN);
+}
+
 /* Whether the drive puts out these numbers, by command (1) or by itself (0). */
 static int puts_out(uint64_t now_ms, int commanded, double first, double second)
 {
@@ -193,9 +200,10 @@ static int puts_out(uint64_t now_ms, int commanded, double first, double second)
 
 static void test_time_runs_out(void)
 {
-    begin(TH_LAYOUT_LEFT_RIGHT);
+    power_up(TH_LAYOUT_LEFT_RIGHT);
     CHECK(puts_out(0, 0, 0, 0)); /* zero at power-up */
     CHECK(puts_out(100000, 0, 0, 0));
+    begin(TH_LAYOUT_LEFT_RIGHT);
     CHECK(command_at(1000, 1, 5, 2, 3) == TH_TAKEN);
     CHECK(puts_out(1000, 1, 2, 3));
     CHECK(puts_out(1099, 1, 2, 3));
@@ -224,7 +232,7 @@ static void test_only_newer(void)
     CHECK(puts_out(200, 1, 4, 4));
     CHECK(command_at(201, 1, UINT64_MAX, 5, 5) == TH_TAKEN);
     CHECK(puts_out(202, 1, 5, 5));
-    CHECK(drive.counts[TH_TAKEN] == 4 && drive.counts[TH_NOT_NEWER] == 4);
+    CHECK(drive.counts[TH_TAKEN] == 5 && drive.counts[TH_NOT_NEWER] == 4);
 }
 
 static void test_sessions(void)
@@ -234,20 +242,49 @@ static void test_sessions(void)
     CHECK(command_at(0, 1, 50, 1, 1) == TH_TAKEN);
     CHECK(command_at(10, 2, 1, 2, 2) == TH_NOT_AT_REST);
     CHECK(puts_out(99, 1, 1, 1));
-    CHECK(command_at(100, 2, 2, 2, 2) == TH_TAKEN); /* the old one's time has run out */
+    CHECK(command_at(100, 2, 2, 0, 0) == TH_TAKEN); /* the old one's time has run out */
+    CHECK(command_at(100, 2, 3, 2, 2) == TH_TAKEN);
     CHECK(command_at(101, 1, 51, 1, 1) == TH_SESSION_LEFT);
     CHECK(puts_out(102, 1, 2, 2));
-    CHECK(command_at(103, 2, 3, 0, 0) == TH_TAKEN); /* rest by command */
+    CHECK(command_at(103, 2, 4, 0, 0) == TH_TAKEN); /* rest by command */
     CHECK(command_at(104, 1, 52, 1, 1) == TH_SESSION_LEFT);
     th_drive_set_moving(&drive, 1); /* the wheels still turn */
-    CHECK(command_at(105, 3, 1, 3, 3) == TH_NOT_AT_REST);
+    CHECK(command_at(105, 3, 1, 0, 0) == TH_NOT_AT_REST);
     th_drive_set_moving(&drive, 0);
-    CHECK(command_at(106, 3, 2, 3, 3) == TH_TAKEN);
+    CHECK(command_at(106, 3, 2, 0, 0) == TH_TAKEN);
     for (session = 4; session < 4 + TH_LEFT_SESSIONS; session++)
-        CHECK(command_at(1000 * session, session, 1, 1, 1) == TH_TAKEN);
+        CHECK(command_at(1000 * session, session, 1, 0, 0) == TH_TAKEN);
     for (session = 3; session < 3 + TH_LEFT_SESSIONS; session++)
         CHECK(command_at(100000, session, 9, 1, 1) == TH_SESSION_LEFT);
     CHECK(puts_out(100000, 0, 0, 0));
+}
+
+/* A drive that restarts while the daemon tracks stays at zero until a zero comes. */
+static void test_begins_at_rest(void)
+{
+    power_up(TH_LAYOUT_LEFT_RIGHT);
+    CHECK(command_at(0, 1, 5, 3, 3) == TH_BEGINS_MOVING);
+    CHECK(command_at(20, 1, 6, 0, 1e-9) == TH_BEGINS_MOVING); /* one wheel is enough */
+    CHECK(command_at(40, 1, 7, 1e-9, 0) == TH_BEGINS_MOVING);
+    CHECK(puts_out(50, 0, 0, 0));
+    CHECK(command_at(60, 1, 8, 11, 0) == TH_BEYOND_LIMIT); /* other reasons come first */
+    CHECK(command_at(80, 1, 9, 0, -0.0) == TH_TAKEN);
+    CHECK(command_at(100, 1, 10, 3, 3) == TH_TAKEN);
+    CHECK(puts_out(120, 1, 3, 3));
+    CHECK(command_at(300, 1, 11, 3, 3) == TH_TAKEN); /* its time ran out, but the session goes on */
+    CHECK(command_at(500, 2, 1, 3, 3) == TH_BEGINS_MOVING);
+    CHECK(command_at(510, 1, 12, 4, 4) == TH_TAKEN); /* a refused one has not ended the session before */
+    CHECK(command_at(700, 2, 1, 0, 0) == TH_TAKEN);
+    CHECK(command_at(710, 2, 2, 3, 3) == TH_TAKEN);
+    CHECK(drive.counts[TH_BEGINS_MOVING] == 4);
+
+    power_up(TH_LAYOUT_BODY);
+    CHECK(command_at(0, 1, 1, 0, 0.1) == TH_BEGINS_MOVING); /* a turn on the spot is motion */
+    power_up(TH_LAYOUT_SPEED_STEER);
+    CHECK(command_at(0, 1, 1, 0.1, 0) == TH_BEGINS_MOVING);
+    CHECK(puts_out(1, 0, 0, 0) && output.hold_steering);
+    CHECK(command_at(10, 1, 2, 0, 0.5) == TH_TAKEN); /* a steering angle is not */
+    CHECK(puts_out(20, 1, 0, 0.5));
 }
 
 static void test_checks(void)
@@ -279,21 +316,22 @@ static void test_checks(void)
 
 static void test_steered(void)
 {
-    begin(TH_LAYOUT_SPEED_STEER);
+    power_up(TH_LAYOUT_SPEED_STEER);
     CHECK(puts_out(0, 0, 0, 0) && output.hold_steering);
+    begin(TH_LAYOUT_SPEED_STEER);
     CHECK(command_at(0, 1, 1, 2, 0.5) == TH_TAKEN);
     CHECK(puts_out(50, 1, 2, 0.5) && !output.hold_steering);
     CHECK(puts_out(100, 0, 0, 0.5) && output.hold_steering); /* speed zero, steering held */
     CHECK(command_at(110, 1, 2, 0, -0.5) == TH_TAKEN);
-    CHECK(command_at(120, 2, 1, 1, -0.5) == TH_TAKEN); /* rest is a matter of speed alone */
-    CHECK(puts_out(121, 1, 1, -0.5));
+    CHECK(command_at(120, 2, 1, 0, -0.4) == TH_TAKEN); /* rest is a matter of speed alone */
+    CHECK(puts_out(121, 1, 0, -0.4));
 }
 
 static void test_subscription(void)
 {
     uint8_t bytes[TH_MAX_DATAGRAM_BYTES], answer[TH_MAX_DATAGRAM_BYTES];
     size_t length = load("subscribed", answer);
-    begin(TH_LAYOUT_LEFT_RIGHT);
+    power_up(TH_LAYOUT_LEFT_RIGHT);
     CHECK(th_drive_poll(&drive, 0, bytes) == TH_SUBSCRIBE_BYTES);
     CHECK(th_load(bytes + 8, 8) == 77 && th_load(bytes + 16, 8) == 1);
     CHECK(th_load(bytes + 40, 4) == TH_WANT_COMMANDS && th_load(bytes + 44, 4) == 3000);
@@ -315,8 +353,9 @@ static void test_noise(void)
 {
     static const char *const names[] = {"command", "command.body", "subscribed", "time-request", "status", "ack"};
     uint32_t state = 1;
-    unsigned round, change;
-    begin(TH_LAYOUT_LEFT_RIGHT);
+    unsigned round, change, moved = 0;
+    power_up(TH_LAYOUT_LEFT_RIGHT);
+    CHECK(command_at(0, SESSION, 0, 0, 0) == TH_TAKEN); /* so that what the golden datagrams ask for is taken */
     for (round = 0; round < 20000; round++) {
         uint8_t bytes[TH_MAX_DATAGRAM_BYTES], *exact;
         size_t length = load(names[round % 6], bytes);
@@ -335,7 +374,9 @@ static void test_noise(void)
         free(exact);
         th_drive_output(&drive, (uint64_t)round * MS, &output);
         CHECK(output.number[0] >= -10 && output.number[0] <= 10 && output.number[1] >= -10 && output.number[1] <= 10);
+        moved += output.number[0] != 0;
     }
+    CHECK(moved > 0);
 }
 
 int main(int argc, char **argv)
@@ -352,6 +393,7 @@ int main(int argc, char **argv)
     test_time_runs_out();
     test_only_newer();
     test_sessions();
+    test_begins_at_rest();
     test_checks();
     test_steered();
     test_subscription();

@@ -314,16 +314,17 @@ typedef struct th_drive_config {
 
 /* What became of a datagram. */
 typedef enum th_taken {
-    TH_TAKEN = 0,    /* a command, in force from now on */
-    TH_SUBSCRIBED,   /* the subscription was answered */
-    TH_OTHER,        /* a sound datagram that is not for a drive */
-    TH_MALFORMED,    /* not a datagram of this protocol, or damaged */
-    TH_NOT_NEWER,    /* a duplicate, or overtaken by a newer one */
-    TH_SESSION_LEFT, /* from a session this drive has left for a newer one */
-    TH_NOT_AT_REST,  /* from a new session, while the machine moves */
-    TH_WRONG_LAYOUT, /* for another kind of drive */
-    TH_BEYOND_LIMIT, /* a number, or the validity, is beyond this drive's limit */
-    TH_TAKEN_COUNT   /* how many outcomes there are */
+    TH_TAKEN = 0,     /* a command, in force from now on */
+    TH_SUBSCRIBED,    /* the subscription was answered */
+    TH_OTHER,         /* a sound datagram that is not for a drive */
+    TH_MALFORMED,     /* not a datagram of this protocol, or damaged */
+    TH_NOT_NEWER,     /* a duplicate, or overtaken by a newer one */
+    TH_SESSION_LEFT,  /* from a session this drive has left for a newer one */
+    TH_NOT_AT_REST,   /* from a new session, while the machine moves */
+    TH_WRONG_LAYOUT,  /* for another kind of drive */
+    TH_BEYOND_LIMIT,  /* a number, or the validity, is beyond this drive's limit */
+    TH_BEGINS_MOVING, /* asks for motion at the beginning of a session, where zero has to come first */
+    TH_TAKEN_COUNT    /* how many outcomes there are */
 } th_taken;
 
 typedef struct th_output {
@@ -335,8 +336,7 @@ typedef struct th_output {
 /* The fields are the drive's own; read the counters as you like, change nothing. */
 typedef struct th_drive {
     th_drive_config config;
-    uint64_t own_session, own_sequence;
-    uint64_t next_subscribe_ns;
+    uint64_t own_session, own_sequence, next_subscribe_ns;
     uint32_t granted_lease_ms; /* 0 until the daemon grants one */
     int has_session, live, moving;
     uint64_t session, sequence; /* of the last command taken */
@@ -369,20 +369,18 @@ static inline void th_drive_expire(th_drive *drive, uint64_t now_ns)
         drive->live = 0;
 }
 
-static inline int th_drive_at_rest(const th_drive *drive)
+/* Whether numbers of the drive's layout ask for zero: on a steered machine a matter of speed alone. */
+static inline int th_drive_is_zero(const th_drive *drive, const double *number)
 {
-    int steered = drive->config.layout == TH_LAYOUT_SPEED_STEER;
-    int zero = !drive->live || (drive->number[0] == 0.0 && (steered || drive->number[1] == 0.0));
-    return zero && !drive->moving;
+    return number[0] == 0.0 && (drive->config.layout == TH_LAYOUT_SPEED_STEER || number[1] == 0.0);
 }
 
 static inline int th_drive_has_left(const th_drive *drive, uint64_t session)
 {
-    unsigned at;
-    for (at = 0; at < drive->left_count; at++)
-        if (drive->left[at] == session)
-            return 1;
-    return 0;
+    unsigned at = 0;
+    while (at < drive->left_count && drive->left[at] != session)
+        at++;
+    return at < drive->left_count;
 }
 
 /* Whether a command may come from this session with this sequence number. */
@@ -394,7 +392,7 @@ static inline th_taken th_drive_order(const th_drive *drive, const th_header *he
         return header->sequence > drive->sequence ? TH_TAKEN : TH_NOT_NEWER;
     if (th_drive_has_left(drive, header->session))
         return TH_SESSION_LEFT;
-    return th_drive_at_rest(drive) ? TH_TAKEN : TH_NOT_AT_REST;
+    return !drive->moving && (!drive->live || th_drive_is_zero(drive, drive->number)) ? TH_TAKEN : TH_NOT_AT_REST;
 }
 
 static inline th_taken th_drive_check(const th_drive *drive, const th_command *command)
@@ -413,6 +411,7 @@ static inline th_taken th_drive_check(const th_drive *drive, const th_command *c
 static inline th_taken th_drive_on_command(th_drive *drive, uint64_t now_ns, const th_header *header,
                                            const th_command *command)
 {
+    int begins = !drive->has_session || drive->session != header->session;
     th_taken taken;
     th_drive_expire(drive, now_ns);
     taken = th_drive_order(drive, header);
@@ -420,7 +419,10 @@ static inline th_taken th_drive_on_command(th_drive *drive, uint64_t now_ns, con
         taken = th_drive_check(drive, command);
     if (taken != TH_TAKEN)
         return taken;
-    if (drive->has_session && drive->session != header->session) {
+    /* A drive that restarts while the daemon tracks must not join a motion at full speed. */
+    if (begins && !th_drive_is_zero(drive, command->wheels))
+        return TH_BEGINS_MOVING;
+    if (begins && drive->has_session) {
         drive->left[drive->left_next] = drive->session;
         drive->left_next = (drive->left_next + 1) % TH_LEFT_SESSIONS;
         if (drive->left_count < TH_LEFT_SESSIONS)
@@ -431,8 +433,7 @@ static inline th_taken th_drive_on_command(th_drive *drive, uint64_t now_ns, con
     drive->sequence = header->sequence;
     drive->received_ns = now_ns;
     drive->valid_ns = command->valid_ns;
-    drive->number[0] = command->wheels[0];
-    drive->number[1] = command->wheels[1];
+    memcpy(drive->number, command->wheels, sizeof drive->number);
     drive->live = 1;
     return TH_TAKEN;
 }
@@ -444,11 +445,10 @@ static inline th_taken th_drive_sort(th_drive *drive, uint64_t now_ns, const uin
     th_subscribed subscribed;
     if (th_header_read(bytes, length, &header) != TH_READ_OK)
         return TH_MALFORMED;
-    if (header.kind == TH_KIND_COMMAND) {
-        if (th_command_read(bytes, length, &header, &command) != TH_READ_OK)
-            return TH_MALFORMED;
-        return th_drive_on_command(drive, now_ns, &header, &command);
-    }
+    if (header.kind == TH_KIND_COMMAND)
+        return th_command_read(bytes, length, &header, &command) == TH_READ_OK
+                   ? th_drive_on_command(drive, now_ns, &header, &command)
+                   : TH_MALFORMED;
     if (header.kind != TH_KIND_SUBSCRIBED)
         return TH_OTHER;
     if (th_subscribed_read(bytes, length, &header, &subscribed) != TH_READ_OK)
