@@ -1,0 +1,65 @@
+//! The command line: one line a subcommand; each one's arguments and work are in its own file.
+
+use crate::{demo, orders, record, replay, simulate, status, tail};
+use clap::{Parser, Subcommand};
+use std::process::ExitCode;
+
+/// Exit code of a command that could not do its work.
+pub const COULD_NOT_RUN: u8 = 2;
+
+/// Plan, simulate, record and replay the runs of a wheeled robot under trackhold.
+///
+/// Exit codes: 0 done, 1 refused or not reached (replay: diverged), 2 could not run.
+#[derive(Debug, Parser)]
+#[command(name = "fieldbook", version, propagate_version = true, max_term_width = 100)]
+pub struct Cli {
+    /// What to do.
+    #[command(subcommand)]
+    pub command: Command,
+}
+
+/// The subcommands.
+#[derive(Debug, Subcommand)]
+pub enum Command {
+    /// Closed loop in the core, faster than real time.
+    Simulate(simulate::Args),
+    /// A recorded run once more, compared bit for bit; or what a law would have commanded at recorded poses.
+    Replay(replay::Args),
+    /// Daemon, stand-in robot and recorder in one command, on an invented site.
+    Demo(demo::Args),
+    /// What a daemon is doing.
+    Status(status::Args),
+    /// Sends a plan to a daemon.
+    SendPlan(orders::SendPlanArgs),
+    /// Sets the machine in motion along the plan that is loaded.
+    Start(orders::StartArgs),
+    /// Stops the machine: emergency stop, or a ramp along the path.
+    Stop(orders::StopArgs),
+    /// Leaves a latched stop; moves nothing.
+    Reset(orders::ResetArgs),
+    /// A daemon's journal into a track log.
+    Record(record::Args),
+    /// A daemon's journal as it comes, a line a tick.
+    Tail(tail::Args),
+}
+
+impl Command {
+    /// Does the work.
+    ///
+    /// # Errors
+    /// Why it could not run; the program then prints that and exits with [`COULD_NOT_RUN`].
+    pub fn run(self) -> anyhow::Result<ExitCode> {
+        match self {
+            Self::Simulate(args) => simulate::run(&args),
+            Self::Replay(args) => replay::run(&args),
+            Self::Demo(args) => demo::run(&args),
+            Self::Status(args) => status::run(&args),
+            Self::SendPlan(args) => orders::run_send_plan(&args),
+            Self::Start(args) => orders::run_start(&args),
+            Self::Stop(args) => orders::run_stop(&args),
+            Self::Reset(args) => orders::run_reset(&args),
+            Self::Record(args) => record::run(&args),
+            Self::Tail(args) => tail::run(&args),
+        }
+    }
+}

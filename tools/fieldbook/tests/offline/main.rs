@@ -1,0 +1,7 @@
+//! Tests of what needs no network: simulated runs, track logs, replays.
+
+mod common;
+mod replay;
+mod robot;
+mod simulate;
+mod zoh;
