@@ -1,0 +1,6 @@
+//! What the whole-program tests and benches share.
+
+pub mod drive;
+pub mod measured;
+pub mod programs;
+pub mod smoothing;
