@@ -96,6 +96,8 @@ fn the_measured_run_is_taken_stopped_over_its_gap_and_replays_identical() {
     std::thread::scope(|scope| {
         let operator = scope.spawn(|| operate(to, &driven, &ended));
         stream(&rows, to, &driven);
+        // The last pose waits for the next tick, and that for the recorder.
+        std::thread::sleep(Duration::from_millis(500));
         ended.store(true, Ordering::SeqCst);
         operator.join().unwrap();
     });

@@ -7,6 +7,7 @@ use fieldbook::client::Client;
 use fieldbook::log::LogReader;
 use fieldbook::orders;
 use fieldbook::record::Recorder;
+use nix::sys::time::TimeSpec;
 use nix::time::{ClockId, ClockNanosleepFlags, clock_gettime, clock_nanosleep};
 use std::net::{SocketAddr, UdpSocket};
 use std::sync::Arc;
@@ -26,6 +27,8 @@ use trackhold_tests::programs::{Running, free_address, scratch};
 const ROUNDS: usize = 6;
 const ROUND: Duration = Duration::from_secs(2);
 const PERIOD_NS: u64 = 1_000_000;
+/// Silence before a measured exchange, of stop and echo alike: both come out of the blue.
+const SILENCE: Duration = Duration::from_millis(5);
 
 fn main() {
     println!(
@@ -88,12 +91,16 @@ fn report(name: &str, mut ours: Vec<f64>, mut baseline: Vec<f64>) {
     }
 }
 
-/// How late moments on a grid are, µs. The grid's origin is not known; that of the most punctual one is taken, for daemon
-/// and baseline alike.
+/// How late moments are on a grid of whole milliseconds of the clock, µs. A moment that comes periods late counts against
+/// the first period missed, and what follows it against the grid from there.
 fn late_us(moments: &[u64]) -> Vec<f64> {
-    let offset = |(k, at): (usize, &u64)| *at as i64 - (k as u64 * PERIOD_NS) as i64;
-    let origin = moments.iter().enumerate().map(offset).min().unwrap_or_default();
-    moments.iter().enumerate().map(|moment| (offset(moment) - origin) as f64 * 1e-3).collect()
+    let mut due = moments[0] - moments[0] % PERIOD_NS;
+    let late = moments.iter().map(|at| {
+        let late = at - due;
+        due += PERIOD_NS * (late / PERIOD_NS + 1);
+        late as f64 * 1e-3
+    });
+    late.collect()
 }
 
 fn lateness(name: &str, privileges: Option<(i32, usize)>) {
@@ -130,13 +137,12 @@ fn bare_moments(privileges: Option<(i32, usize)>) -> Vec<u64> {
                 println!("    not granted: {refused}");
             }
         }
-        let begin = now_ns() + PERIOD_NS;
-        let ticks = ROUND.as_nanos() as u64 / PERIOD_NS;
-        let mut moments = Vec::with_capacity(ticks as usize);
-        for k in 0..ticks {
-            let due = begin + k * PERIOD_NS;
-            let due =
-                nix::sys::time::TimeSpec::new((due / 1_000_000_000) as i64, (due % 1_000_000_000) as i64);
+        let mut moments = Vec::with_capacity(1 + (ROUND.as_nanos() as u64 / PERIOD_NS) as usize);
+        let end = now_ns() + ROUND.as_nanos() as u64;
+        while now_ns() < end {
+            // The next whole period: those that were missed are left out, as the daemon does.
+            let due = (now_ns() / PERIOD_NS + 1) * PERIOD_NS;
+            let due = TimeSpec::new((due / 1_000_000_000) as i64, (due % 1_000_000_000) as i64);
             let _ = clock_nanosleep(ClockId::CLOCK_MONOTONIC, ClockNanosleepFlags::TIMER_ABSTIME, &due);
             moments.push(now_ns());
         }
@@ -160,7 +166,7 @@ fn stop_to_zero() {
     let mut operator = Client::connect_to(daemon.address()).expect("loopback");
     for trial in 0..1500_u64 {
         assert!(orders::reset(&mut operator).expect("an answer").accepted());
-        while drive.next(Duration::from_micros(200)).is_some() {}
+        while drive.next(SILENCE).is_some() {}
         let stop = Message::Stop(Stop { stop: StopKind::Emergency });
         let datagram = Envelope { session: 4, sequence: trial, stamp_ns: 0, message: stop }.to_vec();
         let begin = Instant::now();
@@ -173,7 +179,7 @@ fn stop_to_zero() {
     daemon.stop().expect("a daemon that ends");
 }
 
-/// Sends back what comes, to a socket that is not the sender's: like a stop, whose zero goes to the drive.
+/// Sends back what comes.
 fn echo_server() -> SocketAddr {
     let server = UdpSocket::bind("127.0.0.1:0").expect("a loopback port");
     let address = server.local_addr().expect("a bound socket");
@@ -191,6 +197,7 @@ fn echo_us(server: SocketAddr, datagram: &[u8]) -> f64 {
     SOCKET.with(|socket| {
         let mut answer = [0; 1200];
         socket.set_read_timeout(Some(Duration::from_millis(500))).expect("a timeout");
+        std::thread::sleep(SILENCE);
         let begin = Instant::now();
         socket.send_to(datagram, server).expect("loopback");
         socket.recv(&mut answer).expect("an echo");

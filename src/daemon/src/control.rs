@@ -276,6 +276,13 @@ impl Grid {
     }
 }
 
+/// The next whole hundredth of a second. A grid that begins there lets a journal's stamps tell by themselves how late each
+/// tick was, at every rate whose period divides it.
+fn whole_grid_step(now: TimeNs) -> TimeNs {
+    const STEP_NS: u64 = 10_000_000;
+    TimeNs(now.0.next_multiple_of(STEP_NS))
+}
+
 /// How late ticks are, summed up for a note a second.
 #[derive(Clone, Copy, Debug, Default)]
 struct Lateness {
@@ -305,7 +312,7 @@ impl Lateness {
 /// If the system gives no timer.
 pub fn run(mut control: Loop, bell: &Bell) -> std::io::Result<()> {
     let timer = TimerFd::new(ClockId::CLOCK_MONOTONIC, TimerFlags::TFD_NONBLOCK | TimerFlags::TFD_CLOEXEC)?;
-    control.begin(clock::now());
+    control.begin(whole_grid_step(clock::now()));
     let mut more = false;
     loop {
         if !more {
