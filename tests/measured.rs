@@ -124,5 +124,6 @@ pub fn settings(pose_timeout_s: f64) -> Settings {
         law: LawSettings { name: "kanayama".into(), gains: Values::default() },
         node: values(&[("rate_hz", 50.0), ("pose_timeout_s", pose_timeout_s)]),
         pose: values(&[("heading_offset_rad", math::PI)]),
+        check: Values::default(),
     }
 }

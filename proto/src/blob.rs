@@ -196,7 +196,7 @@ impl<'de, const N: usize> Deserialize<'de> for Hex<N> {
     }
 }
 
-fn to_hex(bytes: &[u8]) -> String {
+pub(crate) fn to_hex(bytes: &[u8]) -> String {
     let digit = |nibble: u8| char::from_digit(u32::from(nibble), 16).unwrap_or('?');
     bytes.iter().flat_map(|byte| [digit(byte >> 4), digit(byte & 15)]).collect()
 }

@@ -3,8 +3,8 @@
 use crate::codec::DecodeError;
 use crate::journal::MAX_PLAN_BYTES;
 use crate::message::{
-    Ack, Command, JournalGone, JournalPart, JournalRequest, PART_BYTES, PlanPart, Pose, Status, Subscribe,
-    WANT_COMMANDS, WANT_JOURNAL, WANT_STATUS,
+    Ack, Command, JournalGone, JournalPart, JournalRequest, PART_BYTES, PlanMissing, PlanPart, Pose, Status,
+    Subscribe, WANT_COMMANDS, WANT_JOURNAL, WANT_STATUS,
 };
 
 type Checked = Result<(), DecodeError>;
@@ -35,6 +35,10 @@ pub(crate) fn plan_part(part: &PlanPart) -> Checked {
     demand(begin < total, "part", "below total_bytes / part_bytes, rounded up")?;
     let held = part.bytes.as_slice().len() as u64;
     demand(held == (total - begin).min(size), "bytes", "part_bytes long, or what is left in the last part")
+}
+
+pub(crate) fn plan_missing(missing: &PlanMissing) -> Checked {
+    demand(missing.missing >= 1, "missing", "at least 1")
 }
 
 pub(crate) fn subscribe(subscribe: &Subscribe) -> Checked {

@@ -5,7 +5,7 @@
 //! *Events* go into the node, *effects* and tick records come out. The node numbers all of them in the order it takes
 //! or makes them, before any queue: a number that is missing later was lost later.
 
-use crate::blob::{BootId, Digest, Text};
+use crate::blob::{BootId, Digest, Text, to_hex};
 use crate::message::{Command, Pose, Start, WheelLayout};
 use crate::words::{Cause, Mode, Refusal, StopKind};
 use alloc::string::String;
@@ -57,12 +57,14 @@ pub enum Body {
     ModeChange(ModeChange),
     /// Effect: a pose was refused.
     PoseRefused(PoseRefused),
-    /// Effect: a plan was loaded.
+    /// Effect: a plan is in force from now on; where it continues another one, from the tick before this entry on.
     PlanLoaded(PlanLoaded),
     /// Written by a recorder: these numbers could not be had.
     Gap(Gap),
     /// Written by a recorder: the log is complete up to here.
     End(End),
+    /// Effect: a plan that continues the one in force was taken and waits for its plan time.
+    PlanWaits(PlanWaits),
 }
 
 impl Body {
@@ -76,6 +78,7 @@ impl Body {
                 | Self::ModeChange(_)
                 | Self::PoseRefused(_)
                 | Self::PlanLoaded(_)
+                | Self::PlanWaits(_)
         )
     }
 
@@ -97,6 +100,7 @@ impl Body {
             Self::PlanLoaded(_) => "plan-loaded",
             Self::Gap(_) => "gap",
             Self::End(_) => "end",
+            Self::PlanWaits(_) => "plan-waits",
         }
     }
 }
@@ -156,8 +160,12 @@ pub struct PlanEvent {
     pub raw: Vec<u8>,
 }
 
+/// A plan in JSON as its text, any other bytes as hex digits.
 fn as_text<S: serde::Serializer>(raw: &[u8], serializer: S) -> Result<S::Ok, S::Error> {
-    serializer.serialize_str(&String::from_utf8_lossy(raw))
+    match core::str::from_utf8(raw) {
+        Ok(text) if text.starts_with('{') => serializer.serialize_str(text),
+        _ => serializer.serialize_str(&to_hex(raw)),
+    }
 }
 
 /// An order as it arrived.
@@ -374,7 +382,7 @@ pub struct PoseRefused {
     pub refusal: Refusal,
 }
 
-/// A plan that was taken.
+/// A plan that is in force from now on.
 #[derive(Clone, Copy, Debug, PartialEq, Encode, Decode, Serialize)]
 pub struct PlanLoaded {
     /// SHA-256 of its bytes.
@@ -385,10 +393,27 @@ pub struct PlanLoaded {
     pub revision: u32,
     /// True if more segments are expected.
     pub open: bool,
-    /// Its duration, ns.
+    /// The plan time of its end: its duration, or, where it continues another plan, where it begins and its duration, ns.
     pub duration_ns: u64,
     /// The length of its path, m.
     pub length_m: f64,
+}
+
+/// A plan that was taken and waits for its plan time.
+#[derive(Clone, Copy, Debug, PartialEq, Encode, Decode, Serialize)]
+pub struct PlanWaits {
+    /// SHA-256 of its bytes.
+    pub digest: Digest,
+    /// Its revision.
+    pub revision: u32,
+    /// Plan time at which it goes on, ns.
+    pub at_ns: u64,
+    /// How far the position steps there, m.
+    pub position_step_m: f64,
+    /// How far the curvature steps there, 1/m; on a machine that turns on the spot nothing but a lag comes of it.
+    pub curvature_step_1_m: f64,
+    /// Plans waiting from now on, this one included.
+    pub waiting: u32,
 }
 
 /// Numbers a recorder could not get.

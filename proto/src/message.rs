@@ -13,6 +13,9 @@ use serde::{Deserialize, Serialize};
 /// Most bytes of a plan in one part.
 pub const PART_BYTES: usize = 1024;
 
+/// Most bytes of marks in one list of missing parts.
+pub const MARK_BYTES: usize = 1024;
+
 /// Most bytes of journal in one datagram.
 pub const JOURNAL_BYTES: usize = 1100;
 
@@ -170,12 +173,30 @@ pub enum WheelLayout {
     LeftRight,
     /// \[speed m/s of the rear axle's midpoint, steering angle rad of the equivalent single front wheel\].
     SpeedSteer,
+    /// \[speed m/s of the rear axle's midpoint, steering angles rad of the left and of the right front wheel\].
+    Ackermann,
+    /// \[rim speed m/s, steering angle rad\] of the one wheel that drives and steers.
+    SteeredWheel,
 }
 
 impl WheelLayout {
     /// How many of the four numbers are in use.
     pub const fn count(self) -> usize {
-        2
+        self.columns().len()
+    }
+
+    /// Whether a number is a steering angle, which zero holds; the others are speeds.
+    pub const fn is_angle(self, index: usize) -> bool {
+        match self {
+            Self::Body | Self::LeftRight => false,
+            Self::SpeedSteer | Self::SteeredWheel => index == 1,
+            Self::Ackermann => index == 1 || index == 2,
+        }
+    }
+
+    /// Whether any number is a steering angle.
+    pub const fn is_steered(self) -> bool {
+        self.is_angle(1)
     }
 
     /// Column names of the numbers in use.
@@ -184,6 +205,8 @@ impl WheelLayout {
             Self::Body => &["command_speed_m_s", "command_turn_rate_rad_s"],
             Self::LeftRight => &["left_wheel_rad_s", "right_wheel_rad_s"],
             Self::SpeedSteer => &["rear_speed_m_s", "steer_rad"],
+            Self::Ackermann => &["rear_speed_m_s", "left_steer_rad", "right_steer_rad"],
+            Self::SteeredWheel => &["wheel_speed_m_s", "steer_rad"],
         }
     }
 }
@@ -292,7 +315,7 @@ pub struct Status {
     pub plan_id: Text<64>,
     /// The plan's revision.
     pub plan_revision: u32,
-    /// The plan's duration, ns.
+    /// The plan time of the plan's end: its duration, unless it continues another plan, ns.
     pub plan_duration_ns: u64,
     /// The plan time reached, ns.
     pub plan_time_ns: u64,
@@ -326,6 +349,32 @@ pub struct Status {
     pub next_entry: u64,
     /// Counters since boot.
     pub counters: Counters,
+}
+
+/// Tells a planner which parts of its plan have not arrived, so that it need not send all of them again.
+#[derive(Clone, Copy, Debug, PartialEq, Encode, Decode, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct PlanMissing {
+    /// SHA-256 of the whole plan's bytes, as its parts state it.
+    pub digest: Digest,
+    /// How many parts are missing in all.
+    pub missing: u32,
+    /// Number of the first part missing.
+    pub first: u32,
+    /// A mark a part from `first` on, the least significant bit of a byte first: 1 where the part is missing. Parts
+    /// behind the last mark are not spoken of.
+    pub marks: Blob<MARK_BYTES>,
+}
+
+impl PlanMissing {
+    /// The numbers of the parts marked as missing.
+    pub fn parts(&self) -> impl Iterator<Item = u32> {
+        let marks = self.marks;
+        let first = self.first;
+        (0..8 * marks.as_slice().len() as u32)
+            .filter(move |mark| marks.as_slice()[(mark / 8) as usize] & (1 << (mark % 8)) != 0)
+            .filter_map(move |mark| first.checked_add(mark))
+    }
 }
 
 /// Asks a sender for its clock; it answers with a [`TimeReply`].
@@ -407,4 +456,5 @@ messages! {
     68 "subscribed" Subscribed,
     69 "status" Status: check::status,
     70 "time-request" TimeRequest,
+    71 "plan-missing" PlanMissing: check::plan_missing,
 }

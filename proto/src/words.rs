@@ -176,7 +176,7 @@ pub enum Refusal {
     PlanTime {
         /// The stated plan time, ns.
         plan_time_ns: u64,
-        /// The plan's duration, ns.
+        /// The plan time of the plan's end, ns.
         duration_ns: u64,
     },
     /// What tripped the stop is still there.
@@ -209,6 +209,77 @@ pub enum Refusal {
     PlanUnfit,
     /// The sequence number was seen before with another order.
     SequenceReused,
+    /// A plan that continues another one finds none that is followed.
+    NothingToContinue {
+        /// The mode in force.
+        mode: Mode,
+    },
+    /// A plan that continues another one has another id than the plan in force.
+    OtherPlan,
+    /// The revision does not lie above the greatest one taken since the run's first plan.
+    RevisionNotRising {
+        /// The revision.
+        revision: u32,
+        /// The greatest one taken.
+        last: u32,
+    },
+    /// The plan goes on at a plan time that is reached too soon, or passed already.
+    TooSoon {
+        /// Plan time at which it goes on, ns.
+        at_ns: u64,
+        /// The earliest one allowed: plan time reached and lead, ns.
+        least_ns: u64,
+    },
+    /// So many plans wait for their plan time already.
+    TooManyWaiting {
+        /// How many can wait.
+        limit: u32,
+    },
+    /// The position steps where the plan goes on.
+    PositionStep {
+        /// Plan time of the step, ns.
+        at_ns: u64,
+        /// The step, m.
+        step_m: f64,
+        /// The greatest one allowed, m.
+        limit_m: f64,
+    },
+    /// The heading steps where the plan goes on.
+    HeadingStep {
+        /// Plan time of the step, ns.
+        at_ns: u64,
+        /// The step, rad.
+        step_rad: f64,
+        /// The greatest one allowed, rad.
+        limit_rad: f64,
+    },
+    /// The speed steps where the plan goes on.
+    SpeedStep {
+        /// Plan time of the step, ns.
+        at_ns: u64,
+        /// The step, m/s.
+        step_m_s: f64,
+        /// The greatest one allowed, m/s.
+        limit_m_s: f64,
+    },
+    /// The turn rate steps where the plan goes on, on the spot.
+    TurnRateStep {
+        /// Plan time of the step, ns.
+        at_ns: u64,
+        /// The step, rad/s.
+        step_rad_s: f64,
+        /// The greatest one allowed, rad/s.
+        limit_rad_s: f64,
+    },
+    /// The curvature steps where the plan goes on, and this machine steers.
+    CurvatureStep {
+        /// Plan time of the step, ns.
+        at_ns: u64,
+        /// The step, 1/m.
+        step_1_m: f64,
+        /// The greatest one allowed, 1/m.
+        limit_1_m: f64,
+    },
 }
 
 impl Refusal {
@@ -232,6 +303,16 @@ impl Refusal {
             Self::OutOfRange { .. } => "out-of-range",
             Self::PlanUnfit => "plan-unfit",
             Self::SequenceReused => "sequence-reused",
+            Self::NothingToContinue { .. } => "nothing-to-continue",
+            Self::OtherPlan => "other-plan",
+            Self::RevisionNotRising { .. } => "revision-not-rising",
+            Self::TooSoon { .. } => "too-soon",
+            Self::TooManyWaiting { .. } => "too-many-waiting",
+            Self::PositionStep { .. } => "position-step",
+            Self::HeadingStep { .. } => "heading-step",
+            Self::SpeedStep { .. } => "speed-step",
+            Self::TurnRateStep { .. } => "turn-rate-step",
+            Self::CurvatureStep { .. } => "curvature-step",
         }
     }
 }
@@ -274,7 +355,7 @@ impl fmt::Display for Refusal {
             ),
             Self::PlanTime { plan_time_ns, duration_ns } => write!(
                 f,
-                "plan time {:.3} s lies outside the plan, which lasts {:.3} s",
+                "plan time {:.3} s lies outside the plan, which ends at {:.3} s",
                 seconds(plan_time_ns),
                 seconds(duration_ns)
             ),
@@ -290,8 +371,59 @@ impl fmt::Display for Refusal {
             Self::OutOfRange { value, bound } => write!(f, "value {value} lies outside ±{bound}"),
             Self::PlanUnfit => f.write_str("the plan is not fit"),
             Self::SequenceReused => f.write_str("this session used the sequence number for another order: count up"),
+            Self::NothingToContinue { mode } => write!(
+                f,
+                "mode {mode}: no plan is followed that this one could continue: send a plan of its own, without continues"
+            ),
+            Self::OtherPlan => {
+                f.write_str("another plan is followed: a plan that continues it has the same id, and a greater revision")
+            }
+            Self::RevisionNotRising { revision, last } => {
+                write!(f, "revision {revision} does not lie above {last}, the greatest one taken: count up")
+            }
+            Self::TooSoon { at_ns, least_ns } => write!(
+                f,
+                "continues.at_s {:.3} s lies before {:.3} s, the plan time reached and node.continue_lead_s: go on later, or send earlier",
+                seconds(at_ns),
+                seconds(least_ns)
+            ),
+            Self::TooManyWaiting { limit } => write!(
+                f,
+                "{limit} plans wait for their plan time already: send less far ahead, or replace from an earlier plan time on"
+            ),
+            Self::PositionStep { at_ns, step_m, limit_m } => {
+                step(f, at_ns, "position", step_m, limit_m, ("m", "joint_distance_m"))
+            }
+            Self::HeadingStep { at_ns, step_rad, limit_rad } => {
+                step(f, at_ns, "heading", step_rad, limit_rad, ("rad", "joint_heading_rad"))
+            }
+            Self::SpeedStep { at_ns, step_m_s, limit_m_s } => {
+                step(f, at_ns, "speed", step_m_s, limit_m_s, ("m/s", "joint_speed_m_s"))
+            }
+            Self::TurnRateStep { at_ns, step_rad_s, limit_rad_s } => {
+                step(f, at_ns, "turn rate", step_rad_s, limit_rad_s, ("rad/s", "joint_turn_rate_rad_s"))
+            }
+            Self::CurvatureStep { at_ns, step_1_m, limit_1_m } => {
+                step(f, at_ns, "curvature", step_1_m, limit_1_m, ("1/m", "joint_curvature_1_m"))
+            }
         }
     }
+}
+
+/// A step where a plan goes on, in words: place, value, limit, and what would mend it.
+fn step(
+    f: &mut fmt::Formatter<'_>,
+    at_ns: u64,
+    what: &str,
+    step: f64,
+    limit: f64,
+    (unit, key): (&str, &str),
+) -> fmt::Result {
+    write!(
+        f,
+        "at plan time {:.3} s the {what} steps by {step:.4} {unit}, node.{key} allows {limit} {unit}: begin where the plan in force is by then",
+        seconds(at_ns)
+    )
 }
 
 const fn mode_advice(mode: Mode) -> &'static str {

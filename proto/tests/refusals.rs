@@ -69,8 +69,8 @@ fn a_wrong_value_is_refused_by_its_field() {
     let cases = [
         (with("command", 0, &[5]), "payload of command, read up to byte 4: Mode has no value 5, only 0 to 4"),
         (
-            with("command", 4, &[3]),
-            "payload of command, read up to byte 8: WheelLayout has no value 3, only 0 to 2",
+            with("command", 4, &[5]),
+            "payload of command, read up to byte 8: WheelLayout has no value 5, only 0 to 4",
         ),
         (
             with("status", 28, &[12]),
@@ -107,6 +107,7 @@ fn a_wrong_value_is_refused_by_its_field() {
             with("journal-part.third-of-three", 8, &[2]),
             "field entries: must be 1 where an entry travels in several parts",
         ),
+        (with("plan-missing", 32, &none), "field missing: must be at least 1"),
         (with("ack", 20, &[2]), "field accepted: must be 0 or 1"),
     ];
     for (datagram, expected) in cases {
@@ -144,7 +145,7 @@ fn offset_of(datagram: &[u8], value: f64) -> usize {
 #[test]
 fn what_is_not_finite_is_refused_in_every_number() {
     let mut fields_seen = 0;
-    for name in ["pose", "command", "command.body", "command.speed-steer", "status"] {
+    for name in ["pose", "command", "command.body", "command.ackermann", "status"] {
         for (field, value) in object(name) {
             let numbers = match &value {
                 Value::Array(numbers) => numbers[..2].to_vec(),

@@ -7,7 +7,8 @@ use trackhold_core::digest::{self, ResultDigest};
 use trackhold_core::geometry::Pose as Pose2;
 use trackhold_core::keys::Values;
 use trackhold_core::node::{Event, Node, Sink};
-use trackhold_core::plan::compile;
+use trackhold_core::plan::check::admit;
+use trackhold_core::plan::{compile, pack};
 use trackhold_core::settings::{LawSettings, Settings, VehicleSettings};
 use trackhold_core::time::TimeNs;
 use trackhold_proto::Envelope;
@@ -49,11 +50,11 @@ fn settings(law: &str) -> Settings {
 const BENDS: &str = r#"{"format":"trackhold-plan/1","id":"bends","revision":1,"start":{"x_m":0,"y_m":0,"heading_rad":0},
 "segments":[{"kind":"arc","radius_m":50,"turn_rad":900,"speed_m_s":1}]}"#;
 
-/// A node that tracks, and the tick it is at.
-fn tracking(law: &str) -> (Node, Last, u64) {
+/// A node that tracks a plan, and the tick it is at.
+fn tracking(law: &str, raw: &[u8]) -> (Node, Last, u64) {
     let mut last = Last::default();
     let mut node = Node::new(&settings(law), Hex([1; 16]), 1, TimeNs(0), &mut last).expect("settings hold");
-    let raw = BENDS.as_bytes().to_vec();
+    let raw = raw.to_vec();
     let plan = compile(&raw, &**node.vehicle()).expect("a good plan");
     let digest = digest::of_bytes(&raw);
     let event = PlanEvent { session: 1, sequence: 1, digest, raw };
@@ -90,7 +91,7 @@ fn ticks(criterion: &mut Criterion) {
     let mut group = criterion.benchmark_group("pose and tick");
     group.throughput(Throughput::Elements(1));
     for law in ["kanayama", "samson", "off-axle"] {
-        let (mut node, mut last, mut tick) = tracking(law);
+        let (mut node, mut last, mut tick) = tracking(law, BENDS.as_bytes());
         group.bench_function(law, |bencher| {
             bencher.iter(|| {
                 let at = tick * 1_000_000 % 40_000_000_000_000;
@@ -105,7 +106,7 @@ fn ticks(criterion: &mut Criterion) {
 }
 
 fn tick_body() -> Body {
-    let (mut node, mut last, _) = tracking("kanayama");
+    let (mut node, mut last, _) = tracking("kanayama", BENDS.as_bytes());
     node.handle(TimeNs(0), Event::Tick, &mut last);
     last.0.expect("a tick was made").body
 }
@@ -149,7 +150,7 @@ fn datagrams(criterion: &mut Criterion) {
 }
 
 fn plans(criterion: &mut Criterion) {
-    let (node, ..) = tracking("kanayama");
+    let (node, ..) = tracking("kanayama", BENDS.as_bytes());
     let vehicle = node.vehicle().clone();
     criterion.bench_function("plan of one arc, compiled", |bencher| {
         bencher.iter_batched(
@@ -158,6 +159,79 @@ fn plans(criterion: &mut Criterion) {
             BatchSize::SmallInput,
         );
     });
+}
+
+const MANY: usize = 1_000_000;
+
+/// A plan of so many points on a circle of 50 m at 1 m/s, one every 20 ms, in JSON.
+fn samples_json(count: usize) -> String {
+    let points: Vec<String> = (0..count)
+        .map(|index| {
+            let (t_s, turn) = (0.02 * index as f64, 0.02 * index as f64 / 50.0);
+            let (x_m, y_m) = (50.0 * turn.sin(), 50.0 - 50.0 * turn.cos());
+            format!(r#"{{"t_s":{t_s:.2},"x_m":{x_m:.9},"y_m":{y_m:.9},"heading_rad":{turn:.9}}}"#)
+        })
+        .collect();
+    format!(
+        r#"{{"format":"trackhold-plan/1","id":"many","revision":1,"start":{{"x_m":0,"y_m":0,"heading_rad":0}},"segments":[{{"kind":"samples","points":[{}]}}]}}"#,
+        points.join(",")
+    )
+}
+
+/// A plan of ten arcs on the same circle.
+fn ten_segments() -> String {
+    let arc = r#"{"kind":"arc","radius_m":50,"turn_rad":40,"speed_m_s":1}"#;
+    BENDS.replace(r#"{"kind":"arc","radius_m":50,"turn_rad":900,"speed_m_s":1}"#, &[arc; 10].join(","))
+}
+
+/// What a long plan costs when it comes, and when it is followed.
+fn long_plans(criterion: &mut Criterion) {
+    let (node, ..) = tracking("kanayama", BENDS.as_bytes());
+    let json = samples_json(MANY);
+    let compact = pack(json.as_bytes()).expect("plain samples");
+    println!("plan of 1,000,000 samples: {} bytes compact, {} bytes in JSON", compact.len(), json.len());
+    let mut group = criterion.benchmark_group("plan of 1,000,000 samples");
+    group.sample_size(10);
+    for (form, raw) in [("compact", compact.as_slice()), ("JSON", json.as_bytes())] {
+        group.bench_function(format!("{form}, read and compiled"), |bencher| {
+            bencher.iter_with_large_drop(|| compile(black_box(raw), &**node.vehicle()).expect("a good plan"));
+        });
+        group.bench_function(
+            format!("{form}, loaded: read, compiled, checked as the daemon does"),
+            |bencher| {
+                bencher.iter_with_large_drop(|| admit(black_box(raw), node.terms()).expect("a good plan"));
+            },
+        );
+    }
+    group.bench_function("digest of the compact form", |bencher| {
+        bencher.iter(|| digest::of_bytes(black_box(&compact)));
+    });
+    group.finish();
+
+    let mut group = criterion.benchmark_group("pose and tick with a plan of");
+    group.throughput(Throughput::Elements(1));
+    for (name, raw) in [("ten segments", ten_segments().into_bytes()), ("1,000,000 samples", compact)] {
+        let (mut node, mut last, mut tick) = tracking("kanayama", &raw);
+        group.bench_function(name, |bencher| {
+            bencher.iter(|| {
+                // So many ticks a second that the plan outlasts the bench.
+                let at = tick * 100_000;
+                tick += 1;
+                node.handle(TimeNs(at), pose_event(at), &mut last);
+                node.handle(TimeNs(at), Event::Tick, &mut last);
+            });
+        });
+        assert_eq!(node.mode(), Mode::Tracking, "the bench must measure tracking");
+        let plan = compile(&raw, &**node.vehicle()).expect("a good plan");
+        let mut place = 0.0;
+        group.bench_function(format!("{name}: one lookup anywhere"), |bencher| {
+            bencher.iter(|| {
+                place = (place + 7_919.77) % 19_000.0;
+                plan.at(black_box(place), &mut 0)
+            });
+        });
+    }
+    group.finish();
 }
 
 /// A whole closed loop on an ideal robot, per tick: law, limits, exact motion; without and with the digest.
@@ -187,5 +261,5 @@ fn simulation(criterion: &mut Criterion) {
     group.finish();
 }
 
-criterion_group!(benches, ticks, simulation, records, datagrams, plans);
+criterion_group!(benches, ticks, simulation, records, datagrams, plans, long_plans);
 criterion_main!(benches);

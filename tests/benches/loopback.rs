@@ -31,11 +31,30 @@ const PERIOD_NS: u64 = 1_000_000;
 const SILENCE: Duration = Duration::from_millis(5);
 
 fn main() {
+    // `-- plan` measures that part alone.
+    let all = !std::env::args().any(|argument| argument == "plan");
+    if all {
+        quiet_loop();
+    }
+    println!(
+        "\nlateness of a tick at 1 kHz while a plan of 60 MB arrives, against the same daemon without, µs"
+    );
+    lateness_with_plan("normal scheduling", None);
+    lateness_with_plan("SCHED_FIFO 80, processor 1", Some((80, 1)));
+    if all {
+        stops_and_shares();
+    }
+}
+
+fn quiet_loop() {
     println!(
         "lateness of a tick at 1 kHz against an absolute sleep of the same rate, {ROUNDS} rounds of 2 s each, µs"
     );
     lateness("normal scheduling", None);
     lateness("SCHED_FIFO 80, processor 1", Some((80, 1)));
+}
+
+fn stops_and_shares() {
     println!("\nstop to zero at 10 Hz against a UDP echo, µs");
     stop_to_zero();
     println!("\nshare of one processor, with 50 poses a second and a drive");
@@ -71,6 +90,7 @@ fn daemon(rate_hz: f64, privileges: Option<(i32, usize)>) -> Daemon {
         listen: "127.0.0.1:0".parse().expect("an address"),
         realtime_priority: privileges.map(|(priority, _)| priority),
         cpu: privileges.map(|(_, cpu)| cpu),
+        ring_bytes: 512 << 20,
         ..Net::default()
     };
     Daemon::start(Site { settings: settings(rate_hz), net }).expect("a daemon on loopback")
@@ -78,6 +98,62 @@ fn daemon(rate_hz: f64, privileges: Option<(i32, usize)>) -> Daemon {
 
 fn percentile(sorted: &[f64], share: f64) -> f64 {
     sorted[((sorted.len() - 1) as f64 * share).round() as usize]
+}
+
+/// Ticks from a daemon's journal while a long plan arrives, is checked, loaded and freed again, against ticks before.
+fn lateness_with_plan(name: &str, privileges: Option<(i32, usize)>) {
+    let plans = [long_plan(1), long_plan(2)];
+    let daemon = daemon(1000.0, privileges);
+    let mut planner = Client::connect_to(daemon.address()).expect("loopback");
+    std::thread::sleep(Duration::from_millis(200));
+    let (mut spans, mut quiet) = (Vec::new(), Vec::new());
+    for raw in &plans {
+        let begin = now_ns();
+        std::thread::sleep(2 * ROUND);
+        quiet.push(begin..now_ns());
+        let begin = now_ns();
+        let answer = orders::send_plan(&mut planner, raw).expect("an answer");
+        assert!(answer.accepted(), "{}", answer.ack.text.as_str());
+        println!(
+            "    {} bytes in {:.2} s, {} rounds",
+            raw.len(),
+            answer.round_trip.as_secs_f64(),
+            answer.sent
+        );
+        // The plan before is freed within the worker's next sweeps.
+        std::thread::sleep(Duration::from_millis(500));
+        spans.push(begin..now_ns());
+    }
+    let moments = recorded(&daemon, Duration::from_secs(20));
+    daemon.stop().expect("a daemon that ends");
+    let within = |spans: &[std::ops::Range<u64>]| -> Vec<f64> {
+        let of = |span: &std::ops::Range<u64>| {
+            let inside: Vec<u64> = moments.iter().copied().filter(|at| span.contains(at)).collect();
+            late_us(&inside)
+        };
+        spans.iter().flat_map(of).collect()
+    };
+    report(name, within(&spans), within(&quiet));
+}
+
+/// Samples on a circle, 60 MB in the compact form.
+fn long_plan(revision: u32) -> Vec<u8> {
+    let (count, bytes) = (1_875_000_u32, 32);
+    let mut raw = Vec::with_capacity(144 + bytes * count as usize);
+    raw.extend_from_slice(b"TRKHPLN1");
+    raw.extend_from_slice(&revision.to_le_bytes());
+    raw.extend_from_slice(&[0; 4 + 4 * 8]);
+    raw.extend_from_slice(&count.to_le_bytes());
+    raw.extend_from_slice(&[0; 4]);
+    raw.extend_from_slice(b"long");
+    raw.resize(144, 0);
+    for index in 0..count {
+        let (t_s, turn) = (0.02 * f64::from(index), 0.02 * f64::from(index) / 50.0);
+        for value in [t_s, 50.0 * turn.sin(), 50.0 - 50.0 * turn.cos(), turn] {
+            raw.extend_from_slice(&value.to_le_bytes());
+        }
+    }
+    raw
 }
 
 fn report(name: &str, mut ours: Vec<f64>, mut baseline: Vec<f64>) {
@@ -117,14 +193,21 @@ fn daemon_moments(privileges: Option<(i32, usize)>) -> Vec<u64> {
     let daemon = daemon(1000.0, privileges);
     std::thread::sleep(ROUND);
     let end = now_ns();
+    let moments = recorded(&daemon, Duration::from_millis(500));
+    daemon.stop().expect("a daemon that ends");
+    moments.into_iter().filter(|at| *at < end).collect()
+}
+
+/// The moments of all ticks that a recording of so long gets from a daemon's journal.
+fn recorded(daemon: &Daemon, seconds: Duration) -> Vec<u64> {
     let log = scratch("lateness").join("ticks.tracklog");
     let client = Client::connect_to(daemon.address()).expect("loopback");
     let recorder = Recorder::begin(client, &log, false).expect("a recording");
-    recorder.record(&AtomicBool::new(false), Some(Duration::from_millis(500)), false).expect("a recording");
-    daemon.stop().expect("a daemon that ends");
+    let recording = recorder.record(&AtomicBool::new(false), Some(seconds), false).expect("a recording");
+    assert_eq!(recording.lost, 0, "{:?}", recording.gaps);
     let ticks =
         LogReader::open(&log).expect("a log").filter_map(|entry| match entry.expect("an entry").body {
-            Body::Tick(record) if record.at_ns < end => Some(record.at_ns),
+            Body::Tick(record) => Some(record.at_ns),
             _ => None,
         });
     ticks.collect()

@@ -83,11 +83,13 @@ static void test_commands(void)
         const char *name;
         uint64_t sequence;
         uint32_t layout;
-        double first, second;
+        double first, second, third;
     } cases[] = {
-        {"command", 3, TH_LAYOUT_LEFT_RIGHT, -7.1, -5.3},
-        {"command.body", 4, TH_LAYOUT_BODY, -0.75, 0.3},
-        {"command.speed-steer", 5, TH_LAYOUT_SPEED_STEER, 1.25, -0.45},
+        {"command", 3, TH_LAYOUT_LEFT_RIGHT, -7.1, -5.3, 0.0},
+        {"command.body", 4, TH_LAYOUT_BODY, -0.75, 0.3, 0.0},
+        {"command.speed-steer", 5, TH_LAYOUT_SPEED_STEER, 1.25, -0.45, 0.0},
+        {"command.ackermann", 12, TH_LAYOUT_ACKERMANN, 1.25, 0.43, 0.34},
+        {"command.steered-wheel", 13, TH_LAYOUT_STEERED_WHEEL, -0.85, 1.5, 0.0},
     };
     uint8_t bytes[TH_MAX_DATAGRAM_BYTES];
     unsigned at;
@@ -101,7 +103,7 @@ static void test_commands(void)
         CHECK(command.valid_ns == 100 * MS);
         CHECK(command.speed_m_s == -0.625 && command.turn_rate_rad_s == 0.2);
         CHECK(command.wheels[0] == cases[at].first && command.wheels[1] == cases[at].second);
-        CHECK(command.wheels[2] == 0.0 && command.wheels[3] == 0.0);
+        CHECK(command.wheels[2] == cases[at].third && command.wheels[3] == 0.0);
     }
 }
 
@@ -136,7 +138,7 @@ static void test_refusals(void)
         th_read read;
     } cases[] = {
         {0, '{', TH_READ_MAGIC},     {4, 2, TH_READ_VERSION}, {5, TH_KIND_POSE, TH_READ_KIND}, {6, 63, TH_READ_LENGTH},
-        {36, 1, TH_READ_RESERVED},   {40, 5, TH_READ_VALUE},  {43, 1, TH_READ_VALUE},          {44, 3, TH_READ_VALUE},
+        {36, 1, TH_READ_RESERVED},   {40, 5, TH_READ_VALUE},  {43, 1, TH_READ_VALUE},          {44, 5, TH_READ_VALUE},
         {103, 0x7F, TH_READ_OK},
     };
     for (at = 0; at < sizeof cases / sizeof cases[0]; at++) {
@@ -166,7 +168,7 @@ static th_output output;
 
 static void power_up(uint32_t layout)
 {
-    th_drive_config config = {0, {10.0, 10.0}, 500 * MS, 3000};
+    th_drive_config config = {0, {10.0, 10.0, 0.0}, 500 * MS, 3000};
     config.layout = layout;
     th_drive_init(&drive, &config, 77, 0);
 }
@@ -325,6 +327,26 @@ static void test_steered(void)
     CHECK(command_at(110, 1, 2, 0, -0.5) == TH_TAKEN);
     CHECK(command_at(120, 2, 1, 0, -0.4) == TH_TAKEN); /* rest is a matter of speed alone */
     CHECK(puts_out(121, 1, 0, -0.4));
+    begin(TH_LAYOUT_STEERED_WHEEL);
+    CHECK(command_at(0, 1, 1, 2, 1.5) == TH_TAKEN);
+    CHECK(puts_out(100, 0, 0, 1.5) && output.hold_steering);
+}
+
+/* A car with an angle for each front wheel: three numbers, two of them held. */
+static void test_three_numbers(void)
+{
+    uint8_t bytes[TH_MAX_DATAGRAM_BYTES];
+    size_t length = load("command.ackermann", bytes);
+    begin(TH_LAYOUT_ACKERMANN);
+    th_store(bytes + 8, 1, 8);
+    CHECK(th_drive_on_datagram(&drive, 0, bytes, length) == TH_BEYOND_LIMIT); /* the third number's limit is 0 */
+    drive.config.limit[2] = 0.5;
+    CHECK(th_drive_on_datagram(&drive, 0, bytes, length) == TH_TAKEN);
+    CHECK(puts_out(50, 1, 1.25, 0.43) && output.number[2] == 0.34);
+    CHECK(puts_out(100, 0, 0, 0.43) && output.number[2] == 0.34 && output.hold_steering);
+    th_store_f64(bytes + 72, 0.0);
+    th_store(bytes + 8, 2, 8);
+    CHECK(th_drive_on_datagram(&drive, 110 * MS, bytes, length) == TH_TAKEN); /* angles are no motion */
 }
 
 static void test_subscription(void)
@@ -396,6 +418,7 @@ int main(int argc, char **argv)
     test_begins_at_rest();
     test_checks();
     test_steered();
+    test_three_numbers();
     test_subscription();
     test_noise();
     if (failures == 0)

@@ -5,8 +5,7 @@
  * SPDX-License-Identifier: MIT
  *
  * You may use, copy, change and pass on this file, in products too, for free and without asking, as long as this notice
- * stays with it. It comes as it is: nobody promises that it works or suits your purpose, and nobody answers for what
- * comes of using it.
+ * stays with it. It comes as it is: nobody promises that it works or suits your purpose, or answers for its use.
  *
  * What it needs: a C99 compiler with uint8_t and a double of 64 bits (IEEE 754 binary64). It calls no library function
  * but memcpy and memset, allocates nothing, keeps no state outside the structs you hand in, and any number of files may
@@ -44,25 +43,32 @@ enum {
     TH_HEADER_BYTES = 40,
     TH_TAG_BYTES = 16,
     TH_MAX_DATAGRAM_BYTES = 1200, /* the room a receive buffer needs */
-    TH_POSE_BYTES = 88,           /* whole datagrams, header included */
-    TH_SUBSCRIBE_BYTES = 48,
-    TH_TIME_REPLY_BYTES = 64
+    /* Whole datagrams, header included. */
+    TH_POSE_BYTES = 88, TH_SUBSCRIBE_BYTES = 48, TH_TIME_REPLY_BYTES = 64
 };
 
 /* Kinds used here; PROTOCOL.md, section 2. */
 enum { TH_KIND_POSE = 1, TH_KIND_SUBSCRIBE = 6, TH_KIND_TIME_REPLY = 9 };
 enum { TH_KIND_COMMAND = 65, TH_KIND_SUBSCRIBED = 68, TH_KIND_TIME_REQUEST = 70 };
-
 enum { TH_WANT_COMMANDS = 1, TH_WANT_JOURNAL = 2, TH_WANT_STATUS = 4 };
 
 enum { TH_MODE_STANDBY, TH_MODE_TRACKING, TH_MODE_CONTROLLED_STOP, TH_MODE_PROTECTIVE_STOP, TH_MODE_EMERGENCY_STOP };
 
-/* What the two numbers of a command mean. */
+/* What the numbers of a command mean; those not named are 0, and no more than three are in use. */
 enum {
-    TH_LAYOUT_BODY,       /* speed m/s, turn rate rad/s */
-    TH_LAYOUT_LEFT_RIGHT, /* left and right wheel, rad/s */
-    TH_LAYOUT_SPEED_STEER /* speed m/s of the rear axle's midpoint, steering angle rad */
+    TH_NUMBERS = 3,
+    TH_LAYOUT_BODY = 0,     /* speed m/s, turn rate rad/s */
+    TH_LAYOUT_LEFT_RIGHT,   /* left and right wheel, rad/s */
+    TH_LAYOUT_SPEED_STEER,  /* speed m/s of the rear axle's midpoint, steering angle rad */
+    TH_LAYOUT_ACKERMANN,    /* the same speed, steering angles rad of the left and of the right front wheel */
+    TH_LAYOUT_STEERED_WHEEL /* rim speed m/s and steering angle rad of the one wheel that drives and steers */
 };
+
+/* Whether number `at` of a command is a steering angle, which zero holds; the others are speeds. */
+static inline int th_layout_is_angle(uint32_t layout, unsigned at)
+{
+    return (at == 1 && layout >= TH_LAYOUT_SPEED_STEER) || (at == 2 && layout == TH_LAYOUT_ACKERMANN);
+}
 
 /* What the reading functions return. */
 typedef enum th_read {
@@ -83,29 +89,22 @@ typedef struct th_header {
 } th_header;
 
 typedef struct th_command {
-    uint32_t mode;
-    uint32_t layout;
+    uint32_t mode, layout;
     uint64_t valid_ns;
-    double speed_m_s;
-    double turn_rate_rad_s;
+    double speed_m_s, turn_rate_rad_s;
     double wheels[4];
 } th_command;
 
 typedef struct th_pose {
     uint64_t measured_ns;
-    double x_m;
-    double y_m;
-    double heading_rad;
-    double position_sd_m;  /* 0 if not known */
-    double heading_sd_rad; /* 0 if not known */
+    double x_m, y_m, heading_rad;
+    double position_sd_m, heading_sd_rad; /* 0 if not known */
 } th_pose;
 
 typedef struct th_subscribed {
     uint8_t boot[16];
-    uint32_t want;
-    uint32_t lease_ms;
-    uint64_t oldest_entry;
-    uint64_t next_entry;
+    uint32_t want, lease_ms;
+    uint64_t oldest_entry, next_entry;
 } th_subscribed;
 
 static inline uint64_t th_load(const uint8_t *from, unsigned bytes)
@@ -119,10 +118,8 @@ static inline uint64_t th_load(const uint8_t *from, unsigned bytes)
 static inline void th_store(uint8_t *to, uint64_t value, unsigned bytes)
 {
     unsigned at;
-    for (at = 0; at < bytes; at++) {
+    for (at = 0; at < bytes; at++, value >>= 8)
         to[at] = (uint8_t)(value & 0xFFu);
-        value >>= 8;
-    }
 }
 
 static inline double th_load_f64(const uint8_t *from)
@@ -211,7 +208,7 @@ static inline th_read th_command_read(const uint8_t *bytes, size_t length, th_he
     out->turn_rate_rad_s = th_load_f64(payload + 24);
     for (at = 0; at < 4; at++)
         out->wheels[at] = th_load_f64(payload + 32 + 8 * at);
-    if (out->mode > TH_MODE_EMERGENCY_STOP || out->layout > TH_LAYOUT_SPEED_STEER)
+    if (out->mode > TH_MODE_EMERGENCY_STOP || out->layout > TH_LAYOUT_STEERED_WHEEL)
         return TH_READ_VALUE;
     if (!th_finite(out->speed_m_s) || !th_finite(out->turn_rate_rad_s))
         return TH_READ_NOT_FINITE;
@@ -307,7 +304,7 @@ enum { TH_LEFT_SESSIONS = 16 };
 
 typedef struct th_drive_config {
     uint32_t layout;       /* the layout this drive understands */
-    double limit[2];       /* greatest magnitude of each of the two numbers */
+    double limit[TH_NUMBERS]; /* greatest magnitude of each number; 0 for those not in use */
     uint64_t valid_max_ns; /* longest validity this drive accepts */
     uint32_t lease_ms;     /* of its subscription, 100 to 60000 */
 } th_drive_config;
@@ -328,9 +325,9 @@ typedef enum th_taken {
 } th_taken;
 
 typedef struct th_output {
-    double number[2];  /* meaning: the layout of the configuration */
+    double number[TH_NUMBERS]; /* meaning: the layout of the configuration */
     int commanded;     /* 1: a command is in force; 0: zero by itself */
-    int hold_steering; /* 1 (steered machine): leave the steering where it is, whatever number[1] says */
+    int hold_steering; /* 1 (steered machine): leave the steering where it is, whatever its numbers say */
 } th_output;
 
 /* The fields are the drive's own; read the counters as you like, change nothing. */
@@ -341,7 +338,7 @@ typedef struct th_drive {
     int has_session, live, moving;
     uint64_t session, sequence; /* of the last command taken */
     uint64_t received_ns, valid_ns;
-    double number[2];
+    double number[TH_NUMBERS];
     uint64_t left[TH_LEFT_SESSIONS]; /* sessions left, a ring */
     unsigned left_count, left_next;
     uint32_t counts[TH_TAKEN_COUNT]; /* how often each outcome of a datagram came about */
@@ -372,7 +369,11 @@ static inline void th_drive_expire(th_drive *drive, uint64_t now_ns)
 /* Whether numbers of the drive's layout ask for zero: on a steered machine a matter of speed alone. */
 static inline int th_drive_is_zero(const th_drive *drive, const double *number)
 {
-    return number[0] == 0.0 && (drive->config.layout == TH_LAYOUT_SPEED_STEER || number[1] == 0.0);
+    unsigned at;
+    for (at = 0; at < TH_NUMBERS; at++)
+        if (number[at] != 0.0 && !th_layout_is_angle(drive->config.layout, at))
+            return 0;
+    return 1;
 }
 
 static inline int th_drive_has_left(const th_drive *drive, uint64_t session)
@@ -402,7 +403,7 @@ static inline th_taken th_drive_check(const th_drive *drive, const th_command *c
         return TH_WRONG_LAYOUT;
     if (command->valid_ns > drive->config.valid_max_ns)
         return TH_BEYOND_LIMIT;
-    for (at = 0; at < 2; at++)
+    for (at = 0; at < TH_NUMBERS; at++)
         if (!(command->wheels[at] <= drive->config.limit[at] && command->wheels[at] >= -drive->config.limit[at]))
             return TH_BEYOND_LIMIT;
     return TH_TAKEN;
@@ -488,12 +489,12 @@ static inline size_t th_drive_poll(th_drive *drive, uint64_t now_ns, uint8_t *to
 /* What the wheels have to do now. Call it every few milliseconds at least: a command's time runs out only here. */
 static inline void th_drive_output(th_drive *drive, uint64_t now_ns, th_output *output)
 {
-    int steered = drive->config.layout == TH_LAYOUT_SPEED_STEER;
+    unsigned at;
     th_drive_expire(drive, now_ns);
     output->commanded = drive->live;
-    output->hold_steering = steered && !drive->live;
-    output->number[0] = drive->live ? drive->number[0] : 0.0;
-    output->number[1] = drive->live || steered ? drive->number[1] : 0.0;
+    output->hold_steering = th_layout_is_angle(drive->config.layout, 1) && !drive->live;
+    for (at = 0; at < TH_NUMBERS; at++)
+        output->number[at] = drive->live || th_layout_is_angle(drive->config.layout, at) ? drive->number[at] : 0.0;
 }
 
 #endif /* TRACKHOLD_H */

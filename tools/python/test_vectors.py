@@ -126,7 +126,26 @@ class TrackLog(unittest.TestCase):
 
     def test_the_golden_frames(self):
         data = (VECTORS / "journal-frames.bin").read_bytes()
-        self.assertEqual(sorted({body[0] for _, _, body in self.frames(data, 0)}), list(range(15)))
+        self.assertEqual(sorted({body[0] for _, _, body in self.frames(data, 0)}), list(range(16)))
+
+
+class CompactPlan(unittest.TestCase):
+    def test_it_is_what_the_daemon_reads(self):
+        points = [(0.0, 1.0, 2.0, 0.5, 1.5, 0.25), (1.0, 2.0, 2.5, 0.5, 1.5, -0.125)]
+        plan = client.compact_plan("S\u00fcd", 7, points, True, 2.5, speed=True, turn_rate=True)
+        # The same plan, packed by the core: see its test of the same digest.
+        self.assertEqual(hashlib.sha256(plan).hexdigest(), "bcd55aa9bed5d5292a8d3824205132346f7331f4c4539161682f6b6556a7c77c")
+        self.assertEqual(len(client.compact_plan("a", 1, [(0.0, 0.0, 0.0, 0.0), (1.0, 1.0, 0.0, 0.0)])), 144 + 64)
+
+    def test_what_is_out_of_range_is_named(self):
+        good = [(0.0, 0.0, 0.0, 0.0), (1.0, 1.0, 0.0, 0.0)]
+        for args, named in [
+            (("", 1, good), "plan_id"), (("x" * 65, 1, good), "plan_id"), (("a", -1, good), "revision"),
+            (("a", 1, good[:1]), "points"), (("a", 1, [good[0], (1.0, math.nan, 0.0, 0.0)]), r"points\[1\]"),
+            (("a", 1, good, False, None, True), r"points\[0\]"), (("a", 1, good, False, math.inf), "continues_at_s"),
+        ]:
+            with self.assertRaisesRegex(client.ProtocolError, named):
+                client.compact_plan(*args)
 
 
 class Daemon:
@@ -255,6 +274,24 @@ class Clients(unittest.TestCase):
         self.assertEqual(len(numbers), 3)
         with client.Planner(("127.0.0.1", 9)) as planner, self.assertRaises(client.ProtocolError):
             planner.send_plan(b"")
+
+    def test_only_the_parts_that_are_missing_are_sent_again(self):
+        plan, lost, parts = bytes(20 * 100), {3, 11}, []
+
+        def answer(daemon, message, _):
+            number = message.fields["part"]
+            parts.append(number)
+            if number != 19:
+                return None
+            missing = lost - set(parts[20:])
+            if not missing:
+                return [ack(message, plan=message.fields["digest"])]
+            marks = bytes([1, 1])
+            return [("plan-missing", {"digest": message.fields["digest"], "missing": 2, "first": 3, "marks": marks.hex()})]
+
+        with Daemon(answer) as daemon, client.Planner(daemon.address) as planner:
+            planner.send_plan(plan, part_bytes=100, wait_s=1.0)
+        self.assertEqual(parts, list(range(20)) + [3, 11, 19])
 
     def test_a_pose_source_answers_time_requests_while_it_sends(self):
         replied = threading.Event()

@@ -8,6 +8,8 @@ For estimators, planners and operators' scripts:
     digest = Planner(("192.0.2.7", port)).send_plan(open("plan.json", "rb").read())
 
     operator = Operator(("192.0.2.7", port))
+    plan = compact_plan("bay-7", 1, [(0.0, 0.0, 0.0, 0.0), (1.0, 0.5, 0.0, 0.0), (2.0, 1.5, 0.0, 0.0)])
+
     operator.start(digest)
     operator.stop()                    # emergency, unless told otherwise
 
@@ -24,7 +26,7 @@ import socket
 import struct
 import threading
 import time
-from typing import Any, Dict, NamedTuple, Optional, Tuple
+from typing import Any, Dict, List, NamedTuple, Optional, Sequence, Tuple
 
 MAGIC = b"\xa7TKH"
 HEADER = struct.Struct("<4sBBHQQQII")
@@ -40,7 +42,7 @@ WORDS = {
     ),
     "stop-kind": ("emergency", "controlled"),
     "start-at": ("beginning", "plan-time", "nearest"),
-    "wheel-layout": ("body", "left-right", "speed-steer"),
+    "wheel-layout": ("body", "left-right", "speed-steer", "ackermann", "steered-wheel"),
 }
 
 # Kind number and fields in wire order. A type is a struct code, one of WORDS, "hex N", "blob N" or "text N".
@@ -85,6 +87,7 @@ KINDS: Dict[str, Tuple[int, Tuple[Tuple[str, str], ...]]] = {
         ("counters", "counters"),
     )),
     "time-request": (70, (("sent_ns", "Q"),)),
+    "plan-missing": (71, (("digest", "hex 32"), ("missing", "I"), ("first", "I"), ("marks", "blob 1024"))),
 }
 
 COUNTERS = (
@@ -321,6 +324,35 @@ class PoseSource(Link):
                 self._closing.wait(0.2)
 
 
+def compact_plan(plan_id: str, revision: int, points: Sequence[Sequence[float]], open_end: bool = False,
+                 continues_at_s: Optional[float] = None, speed: bool = False, turn_rate: bool = False) -> bytes:
+    """A plan of samples in its compact form.
+
+    A point is t_s, x_m, y_m, heading_rad, then speed_m_s if `speed` is set, then turn_rate_rad_s if `turn_rate` is. The
+    plan starts at the first point. Raises ProtocolError naming what is out of range."""
+    name, width = plan_id.encode(), 4 + speed + turn_rate
+    if not 1 <= len(name) <= 64 or 0 in name:
+        raise ProtocolError("plan_id: give 1 to 64 bytes, none of them 0")
+    if len(points) < 2:
+        raise ProtocolError(f"points: {len(points)} of them, give at least two")
+    flags = open_end | speed << 1 | turn_rate << 2 | (continues_at_s is not None) << 3
+    try:
+        _finite(continues_at_s or 0.0)
+        plan = bytearray(struct.pack(
+            "<8sII4dII64s3d", b"TRKHPLN1", revision, flags, *points[0][1:4], continues_at_s or 0.0,
+            len(points), 0, name, 0.0, 0.0, 0.0))
+    except (struct.error, TypeError, ValueError) as error:
+        raise ProtocolError(f"revision, continues_at_s or points[0]: {error}") from None
+    pack = struct.Struct(f"<{width}d").pack
+    for index, point in enumerate(points):
+        try:
+            _finite(*point)
+            plan += pack(*point)
+        except (struct.error, TypeError, ValueError) as error:
+            raise ProtocolError(f"points[{index}], {width} numbers each: {error}") from None
+    return bytes(plan)
+
+
 class Planner(Link):
     """Sends plans."""
 
@@ -333,21 +365,41 @@ class Planner(Link):
         digest = hashlib.sha256(plan).hexdigest()
         pieces = [plan[at:at + part_bytes] for at in range(0, len(plan), part_bytes)]
         sequences = [self.next_sequence() for _ in pieces]
-        own = set(sequences)
-        for _ in range(tries):
-            for part, piece in enumerate(pieces):
+        silent, left, wanted = 0, len(pieces) + 1, range(len(pieces))
+        while silent < tries:
+            for count, part in enumerate(wanted):
                 self.send("plan-part", {
                     "digest": digest, "total_bytes": len(plan), "part_bytes": part_bytes,
-                    "part": part, "bytes": piece.hex(),
+                    "part": part, "bytes": pieces[part].hex(),
                 }, sequences[part])
-                if part % 32 == 31:
+                if count % 32 == 31:
                     # Receive buffers are small; a plan sent in one go would lose its end.
                     time.sleep(0.001)
-            ack = self.wait_for("ack", wait_s, order_session=self.session, order_kind=2, plan=digest)
-            if ack is not None and ack.fields["order_sequence"] in own:
-                _outcome(ack)
+            answer = self._plan_answer(digest, set(sequences), wait_s)
+            if answer is None:
+                silent, wanted = silent + 1, range(len(pieces))
+            elif answer.kind == "ack":
+                _outcome(answer)
                 return digest
+            else:
+                # The last part asks what is missing still.
+                silent = 0 if answer.fields["missing"] < left else silent + 1
+                left, wanted = answer.fields["missing"], _missing(answer, len(pieces) - 1) + [len(pieces) - 1]
         raise NoAnswer(f"no answer to a plan of {len(pieces)} parts, sent {tries} times")
+
+    def _plan_answer(self, digest: str, own: set, wait_s: float) -> Optional[Message]:
+        """The outcome of a plan, or what is missing of it."""
+        end = time.monotonic() + wait_s
+        while True:
+            message = self.receive(end - time.monotonic())
+            if message is None:
+                return None
+            fields = message.fields
+            if message.kind == "plan-missing" and fields["digest"] == digest:
+                return message
+            if message.kind == "ack" and fields["order_session"] == self.session and fields["plan"] == digest \
+                    and fields["order_kind"] == 2 and fields["order_sequence"] in own:
+                return message
 
 
 class Operator(Link):
@@ -389,6 +441,12 @@ class Operator(Link):
                 _outcome(ack)
                 return
         raise NoAnswer(f"no answer to a {kind}, sent {tries} times")
+
+
+def _missing(answer: Message, below: int) -> List[int]:
+    marks, first = bytes.fromhex(answer.fields["marks"]), answer.fields["first"]
+    marked = (first + 8 * at + bit for at, byte in enumerate(marks) for bit in range(8) if byte >> bit & 1)
+    return [part for part in marked if part < below]
 
 
 def _outcome(ack: Message) -> None:

@@ -103,7 +103,13 @@ fn stop_kind() -> BoxedStrategy<StopKind> {
 }
 
 fn command() -> BoxedStrategy<Command> {
-    let layout = select(vec![WheelLayout::Body, WheelLayout::LeftRight, WheelLayout::SpeedSteer]);
+    let layout = select(vec![
+        WheelLayout::Body,
+        WheelLayout::LeftRight,
+        WheelLayout::SpeedSteer,
+        WheelLayout::Ackermann,
+        WheelLayout::SteeredWheel,
+    ]);
     (mode(), layout, whole(), number(), number(), uniform4(number()))
         .prop_map(|(mode, layout, valid_ns, speed_m_s, turn_rate_rad_s, wheels)| Command {
             mode,
@@ -210,6 +216,9 @@ pub(crate) fn any_message() -> BoxedStrategy<Message> {
         ack().prop_map(M::Ack),
         command().prop_map(M::Command),
         journal_part().prop_map(M::JournalPart),
+        (hex(), 1..=u32::MAX, any::<u32>(), blob()).prop_map(|(digest, missing, first, marks)| {
+            M::PlanMissing(PlanMissing { digest, missing, first, marks })
+        }),
         range().prop_map(|(first, last)| M::JournalGone(JournalGone { first, last })),
         subscribed.prop_map(|(boot, want, lease_ms, oldest_entry, next_entry)| {
             M::Subscribed(Subscribed { boot, want, lease_ms, oldest_entry, next_entry })
@@ -238,7 +247,8 @@ fn any_refusal() -> BoxedStrategy<Refusal> {
             R::NoPlan,
             R::NoPose,
             R::PlanUnfit,
-            R::SequenceReused
+            R::SequenceReused,
+            R::OtherPlan
         ]),
         [whole(), whole()].prop_map(|[age_ns, limit_ns]| R::StalePose { age_ns, limit_ns }),
         [number(), number()].prop_map(|[distance_m, limit_m]| R::TooFar { distance_m, limit_m }),
@@ -250,8 +260,26 @@ fn any_refusal() -> BoxedStrategy<Refusal> {
         [whole(), whole()].prop_map(|[holder, left_ns]| R::Lease { holder, left_ns }),
         [whole(), whole()].prop_map(|[stamp_ns, last_ns]| R::StampNotRising { stamp_ns, last_ns }),
         [number(), number()].prop_map(|[value, bound]| R::OutOfRange { value, bound }),
+        mode().prop_map(|mode| R::NothingToContinue { mode }),
+        any::<[u32; 2]>().prop_map(|[revision, last]| R::RevisionNotRising { revision, last }),
+        [whole(), whole()].prop_map(|[at_ns, least_ns]| R::TooSoon { at_ns, least_ns }),
+        any::<u32>().prop_map(|limit| R::TooManyWaiting { limit }),
+        any_step(),
     ]
     .boxed()
+}
+
+fn any_step() -> BoxedStrategy<Refusal> {
+    use Refusal as R;
+    (whole(), number(), number(), 0..5u8)
+        .prop_map(|(at_ns, step, limit, which)| match which {
+            0 => R::PositionStep { at_ns, step_m: step, limit_m: limit },
+            1 => R::HeadingStep { at_ns, step_rad: step, limit_rad: limit },
+            2 => R::SpeedStep { at_ns, step_m_s: step, limit_m_s: limit },
+            3 => R::TurnRateStep { at_ns, step_rad_s: step, limit_rad_s: limit },
+            _ => R::CurvatureStep { at_ns, step_1_m: step, limit_1_m: limit },
+        })
+        .boxed()
 }
 
 fn any_tick() -> BoxedStrategy<TickRecord> {
@@ -338,8 +366,21 @@ pub(crate) fn any_body() -> BoxedStrategy<Body> {
     let loaded = loaded.prop_map(|(digest, id, revision, open, duration_ns, length_m)| {
         Body::PlanLoaded(PlanLoaded { digest, id, revision, open, duration_ns, length_m })
     });
+    let waits = (hex(), any::<[u32; 2]>(), whole(), number(), number());
+    let waits =
+        waits.prop_map(|(digest, [revision, waiting], at_ns, position_step_m, curvature_step_1_m)| {
+            Body::PlanWaits(PlanWaits {
+                digest,
+                revision,
+                at_ns,
+                position_step_m,
+                curvature_step_1_m,
+                waiting,
+            })
+        });
     prop_oneof![
         3 => any_event(),
+        1 => waits,
         1 => any_tick().prop_map(Body::Tick),
         1 => ack,
         1 => command().prop_map(Body::Command),

@@ -115,6 +115,14 @@ pub(crate) fn bodies() -> Vec<Body> {
         duration_ns: 61_000_000_001,
         length_m: 30.5,
     };
+    let waits = PlanWaits {
+        digest: Hex(counting(0)),
+        revision: 8,
+        at_ns: 12_500_000_000,
+        position_step_m: 0.0005,
+        curvature_step_1_m: 0.25,
+        waiting: 2,
+    };
     let mut all = events();
     all.extend([
         Body::Tick(tick()),
@@ -127,6 +135,7 @@ pub(crate) fn bodies() -> Vec<Body> {
         Body::PlanLoaded(loaded),
         Body::Gap(Gap { first: 4, last: 1 << 53 }),
         Body::End(End { entries: 21, digest: Hex(counting(0x40)) }),
+        Body::PlanWaits(waits),
     ]);
     all
 }

@@ -120,6 +120,8 @@ pub(crate) fn command(layout: WheelLayout) -> Command {
         WheelLayout::Body => [-0.75, 0.3, 0.0, 0.0],
         WheelLayout::LeftRight => [-7.1, -5.3, 0.0, 0.0],
         WheelLayout::SpeedSteer => [1.25, -0.45, 0.0, 0.0],
+        WheelLayout::Ackermann => [1.25, 0.43, 0.34, 0.0],
+        WheelLayout::SteeredWheel => [-0.85, 1.5, 0.0, 0.0],
     };
     Command {
         mode: Mode::Tracking,
@@ -210,8 +212,22 @@ fn replies() -> Vec<(&'static str, Envelope)> {
         ("command", envelope(3, M::Command(command(WheelLayout::LeftRight)))),
         ("command.body", envelope(4, M::Command(command(WheelLayout::Body)))),
         ("command.speed-steer", envelope(5, M::Command(command(WheelLayout::SpeedSteer)))),
+        ("command.ackermann", envelope(12, M::Command(command(WheelLayout::Ackermann)))),
+        ("command.steered-wheel", envelope(13, M::Command(command(WheelLayout::SteeredWheel)))),
         ("journal-part", envelope(6, M::JournalPart(frames))),
         ("journal-part.third-of-three", envelope(7, M::JournalPart(part))),
+        (
+            "plan-missing",
+            envelope(
+                14,
+                M::PlanMissing(PlanMissing {
+                    digest: Hex(counting(0)),
+                    missing: 70_000,
+                    first: 33,
+                    marks: blob(&[0b1000_0011, 0, 0xff]),
+                }),
+            ),
+        ),
         ("journal-gone", envelope(8, M::JournalGone(JournalGone { first: 1, last: (1 << 53) + 1 }))),
         ("subscribed", envelope(9, M::Subscribed(granted))),
         ("status", envelope(10, M::Status(status()))),

@@ -1,6 +1,8 @@
 //! The only door to elementary functions. `std`'s have no specified precision and differ between machines; these are
 //! `libm`'s, one version, so that a recording replays bit for bit.
 
+pub mod fresnel;
+
 pub use core::f64::consts::{FRAC_PI_2, PI, TAU};
 
 /// Sine and cosine of an angle in rad, as (cos, sin).

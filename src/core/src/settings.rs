@@ -6,6 +6,7 @@ use crate::keys::{Bound, Key, Problem, Values};
 use crate::law::{self, Law};
 use crate::math::PI;
 use crate::node::params::{self, Params};
+use crate::plan::check::{self, Terms, Thresholds};
 use crate::vehicle::{self, Vehicle};
 use alloc::boxed::Box;
 use alloc::string::{String, ToString};
@@ -70,6 +71,9 @@ pub struct Settings {
     pub node: Values,
     /// Keys of the section `pose`.
     pub pose: Values,
+    /// Keys of the section `check`: they decide which plans are taken. Empty in recordings that are older than it.
+    #[serde(default)]
+    pub check: Values,
 }
 
 /// Settings that hold, and what they build.
@@ -85,6 +89,19 @@ pub struct Checked {
     pub params: Params,
     /// Where the estimator sits.
     pub mount: Mount,
+    /// From where on the check of a plan finds something.
+    pub thresholds: Thresholds,
+}
+
+impl Checked {
+    /// What a plan has to fit.
+    pub fn terms(&self) -> Terms {
+        Terms {
+            vehicle: Arc::clone(&self.vehicle),
+            following: self.law.domain().following(),
+            thresholds: self.thresholds,
+        }
+    }
 }
 
 impl Settings {
@@ -105,8 +122,19 @@ impl Settings {
         let params =
             node.as_ref().and_then(|node| Params::new(node).map_err(|more| within("node", more)).ok());
         let pose = self.pose.checked(POSE_KEYS).map_err(|more| within("pose", more)).ok();
-        let (Some((vehicle, vehicle_values)), Some((law, gains)), Some(node), Some(params), Some(pose)) =
-            (vehicle, law, node, params, pose)
+        let check = self.check.checked(check::KEYS).map_err(|more| within("check", more)).ok();
+        let thresholds = check
+            .as_ref()
+            .and_then(|check| Thresholds::new(check).map_err(|more| within("check", more)).ok());
+        let (
+            Some((vehicle, vehicle_values)),
+            Some((law, gains)),
+            Some(node),
+            Some(params),
+            Some(pose),
+            Some(check),
+            Some(thresholds),
+        ) = (vehicle, law, node, params, pose, check, thresholds)
         else {
             return Err(problems);
         };
@@ -121,10 +149,12 @@ impl Settings {
                 law: LawSettings { name: self.law.name.clone(), gains },
                 node,
                 pose,
+                check,
             },
             vehicle,
             law,
             params,
+            thresholds,
         })
     }
 

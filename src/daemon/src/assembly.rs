@@ -139,7 +139,7 @@ impl Parts {
             letters,
             outlet.another()?,
             Arc::clone(shared),
-            site.net.ring_bytes,
+            (site.net.ring_bytes, site.net.max_plan_bytes),
             summary,
         );
         let supervisor = Supervisor {
@@ -151,7 +151,7 @@ impl Parts {
             tripped_at: None,
         };
         let worker = Worker {
-            vehicle: checked.vehicle,
+            terms: checked.terms(),
             plans: ends.plans,
             waste: ends.waste,
             bell: Arc::clone(loop_bell),
@@ -161,7 +161,8 @@ impl Parts {
         let bell = Arc::clone(loop_bell);
         let intake_ends =
             Ends { stream: ends.stream, orders: ends.orders, drives: ends.drives, jobs, mail, bell };
-        let intake = Intake::new(intake_ends, outlet, Arc::clone(zero), Arc::clone(shared));
+        let intake =
+            Intake::new(intake_ends, outlet, Arc::clone(zero), Arc::clone(shared), site.net.max_plan_bytes);
         Ok((Self { control, intake, publisher, worker, whole_plans, supervisor }, ends.shutdown_trips))
     }
 }

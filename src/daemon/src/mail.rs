@@ -5,7 +5,7 @@ use std::net::SocketAddr;
 use std::sync::Arc;
 use std::sync::mpsc::{Receiver, SyncSender, sync_channel};
 use trackhold_proto::blob::Digest;
-use trackhold_proto::message::Ack;
+use trackhold_proto::message::{Ack, PlanMissing};
 
 /// So many letters may wait.
 const LETTERS: usize = 1024;
@@ -75,15 +75,17 @@ pub enum Letter {
         /// Who asks.
         peer: Peer,
     },
-    /// A plan whose bytes have not the digest they state; it goes no farther.
-    PlanBroken {
-        /// The part that completed it.
+    /// A plan that goes no farther: too long, or its bytes have not the digest they state.
+    PlanRefused {
+        /// The part that completed it or showed it.
         order: OrderKey,
         /// The digest stated.
         digest: Digest,
         /// What was found.
         text: String,
     },
+    /// A planner may want to know which parts are missing.
+    Missing(Peer, Box<PlanMissing>),
     /// An answer that waits for nothing.
     Answer(Peer, Box<Ack>),
 }

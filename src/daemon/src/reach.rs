@@ -5,6 +5,7 @@ use crate::site::net::{self, LISTEN_MEANING, LOCK_MEMORY_MEANING};
 use std::fmt::{self, Write};
 use trackhold_core::keys::{Key, Values};
 use trackhold_core::node::params::{self, Params};
+use trackhold_core::plan::check;
 use trackhold_core::settings::{Checked, POSE_KEYS};
 use trackhold_core::vehicle::Vehicle;
 use trackhold_core::{law, vehicle};
@@ -79,6 +80,8 @@ fn write_all(text: &mut String, site: &Site, checked: &Checked) -> fmt::Result {
     write_keys(text, params::KEYS, &settings.node)?;
     writeln!(text, "\n[pose]")?;
     write_keys(text, POSE_KEYS, &settings.pose)?;
+    writeln!(text, "\n[check]")?;
+    write_keys(text, check::KEYS, &settings.check)?;
     write_net(text, site)?;
     for warning in warnings(site, checked) {
         writeln!(text, "\nwarning: {warning}")?;
@@ -104,6 +107,7 @@ fn write_keys(text: &mut String, keys: &[Key], values: &Values) -> fmt::Result {
 fn write_net(text: &mut String, site: &Site) -> fmt::Result {
     let mut numbers = Values::default();
     numbers.set("ring_bytes", site.net.ring_bytes as f64);
+    numbers.set("max_plan_bytes", site.net.max_plan_bytes as f64);
     site.net
         .realtime_priority
         .into_iter()
@@ -190,10 +194,21 @@ mod tests {
         assert!(said.contains("     5.800 m  together"), "{said}");
         assert!(
             said.contains(
-                "max_accel_m_s2 = 0.5               # m/s²: greatest acceleration and deceleration"
+                "max_accel_m_s2 = 0.5               # m/s²: greatest acceleration, and deceleration unless that"
             ),
             "{said}"
         );
+    }
+
+    #[test]
+    fn a_deceleration_of_its_own_is_the_one_that_brakes() {
+        let text = "[vehicle]\nkind = \"skid-steer\"\nwheel_radius_m = 0.2\ntrack_width_m = 0.5\n\
+                    max_wheel_speed_rad_s = 10\nmax_wheel_accel_rad_s2 = 5\nmax_wheel_decel_rad_s2 = 20\n\
+                    [law]\nname = \"kanayama\"\n";
+        let checked = Site::parse(text, "site.toml").unwrap().checked().unwrap();
+        let reach = Reach::new(&*checked.vehicle, &checked.params);
+        // Textbook: 2 m/s and 4 m/s², v²/(2a).
+        assert_eq!((reach.top_speed_m_s, reach.braking_m), (2.0, 0.5));
     }
 
     #[test]

@@ -1,4 +1,4 @@
-//! The plan worker: checks a plan's digest, compiles it, and frees what the loop is done with. Nothing waits for it.
+//! The plan worker: checks a plan's digest, compiles it, checks that it is fit, and frees what the loop is done with. Nothing waits for it.
 
 use crate::intake::transfer::Whole;
 use crate::lanes::{Bell, Shared, Waste};
@@ -10,8 +10,7 @@ use std::sync::mpsc::{Receiver, RecvTimeoutError};
 use std::time::Duration;
 use trackhold_core::digest;
 use trackhold_core::node::Event;
-use trackhold_core::plan::compile;
-use trackhold_core::vehicle::Vehicle;
+use trackhold_core::plan::check::{Terms, admit};
 use trackhold_proto::journal::PlanEvent;
 
 /// Kind number of the message that carries a plan.
@@ -24,8 +23,8 @@ const RETRY: Duration = Duration::from_millis(1);
 /// The worker.
 #[derive(Debug)]
 pub struct Worker {
-    /// The machine that plans have to fit.
-    pub vehicle: Arc<dyn Vehicle>,
+    /// What plans have to fit.
+    pub terms: Terms,
     /// Plans to the loop.
     pub plans: Producer<Event>,
     /// What the loop is done with.
@@ -61,10 +60,10 @@ impl Worker {
                 raw.len()
             );
             let order = OrderKey { session, sequence, kind: PLAN_KIND };
-            self.mail.post(Letter::PlanBroken { order, digest, text });
+            self.mail.post(Letter::PlanRefused { order, digest, text });
             return;
         }
-        let compiled = compile(&raw, &*self.vehicle).map(Box::new);
+        let compiled = admit(&raw, &self.terms).map(Box::new);
         self.push(Event::Plan(PlanEvent { session, sequence, digest, raw }, compiled));
     }
 

@@ -6,6 +6,7 @@ use std::process::{Command, Output, Stdio};
 use trackhold::site::Site;
 use trackhold_core::geometry::Pose;
 use trackhold_core::node::{Event, Node};
+use trackhold_core::plan::check::admit;
 use trackhold_core::plan::compile;
 use trackhold_core::time::TimeNs;
 use trackhold_proto::blob::Hex;
@@ -23,10 +24,13 @@ fn config(name: &str) -> String {
 }
 
 /// The ready site files, each with a plan that fits.
-const READY: [(&str, &str); 3] = [
+const READY: [(&str, &str); 6] = [
     ("unicycle.toml", "plans/yard-loop.json"),
     ("differential.toml", "plans/yard-loop.json"),
+    ("skid-steer.toml", "plans/yard-loop.json"),
     ("car.toml", "plans/delivery-run.json"),
+    ("car-ackermann.toml", "plans/delivery-run.json"),
+    ("steered-wheel.toml", "plans/delivery-run.json"),
 ];
 
 #[test]
@@ -38,7 +42,7 @@ fn every_ready_site_file_holds_and_its_plan_fits() {
         assert!(said.contains("m  together") && said.contains("[net]"), "{said}");
         let checked = Site::load(config(site).as_ref()).unwrap().checked().unwrap();
         let raw = std::fs::read(config(plan)).unwrap();
-        let compiled = compile(&raw, &*checked.vehicle);
+        let compiled = admit(&raw, &checked.terms());
         let plan = compiled.unwrap_or_else(|findings| panic!("{site} {plan}: {findings:#?}"));
         assert!((20.0..60.0).contains(&plan.duration_s()), "{}", plan.duration_s());
         assert_eq!(checked.law.domain().unfit_direction(plan.travel()), None, "{site}");

@@ -216,6 +216,11 @@ fn refused_plans_name_their_mistake_and_the_plan_loaded_stays() {
         refused.text.as_str().contains("segments[0] (line)")
             && refused.text.as_str().contains("the limit is 10")
     );
+    // Within the speed limit, but beyond the acceleration for a fifth of a second: the check's own finding.
+    let steep = r#"{"kind":"line","length_m":0.1,"speed_m_s":0.0,"end_speed_m_s":0.9}"#;
+    planner.send_plan(&PLAN.replace(r#"{"kind":"line","length_m":50,"speed_m_s":0.5}"#, steep));
+    let refused = planner.ack();
+    assert!(refused.accepted == 0 && refused.text.as_str().contains("wheel acceleration"), "{refused:?}");
     // Parts that state another digest than their bytes have.
     let part = trackhold_proto::message::PlanPart {
         digest: Hex([7; 32]),
@@ -228,7 +233,7 @@ fn refused_plans_name_their_mistake_and_the_plan_loaded_stays() {
     let refused = planner.ack();
     assert!(refused.accepted == 0 && refused.text.as_str().contains("SHA-256"), "{refused:?}");
     let status = planner.status();
-    assert_eq!((status.plan, status.counters.plans_refused), (good, 2));
+    assert_eq!((status.plan, status.counters.plans_refused), (good, 3));
     daemon.stop().unwrap();
 }
 
@@ -288,8 +293,19 @@ fn the_journal_comes_without_gaps_and_what_was_before_can_be_asked_for() {
     let mut recorder = recorder(&daemon);
     recorder.send(Message::JournalRequest(JournalRequest { first: 0, last: 30 }));
     let (mut seen, mut boot) = (std::collections::BTreeSet::new(), None);
+    // Entry 0 holds all settings, and travels in several parts.
+    let mut long = Vec::new();
     recorder.wait("entries 0 to 30 and 20 live ones", |message| {
-        for entry in entries(&message) {
+        let mut arrived = entries(&message);
+        if let Message::JournalPart(part) = &message
+            && part.parts > 1
+        {
+            long.extend_from_slice(part.bytes.as_slice());
+            if part.part + 1 == part.parts {
+                arrived.push(read_frame(&std::mem::take(&mut long)).unwrap().0);
+            }
+        }
+        for entry in arrived {
             seen.insert(entry.number);
             if let Body::Boot(found) = entry.body {
                 boot = Some(found);

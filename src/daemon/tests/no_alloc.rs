@@ -126,8 +126,23 @@ impl Bench {
         let raw = format!(
             r#"{{"format":"trackhold-plan/1","id":"at {speed_m_s}","revision":1,"start":{{"x_m":0,"y_m":0,"heading_rad":0}},
             "segments":[{{"kind":"line","length_m":500,"speed_m_s":{speed_m_s}}}]}}"#
-        )
-        .into_bytes();
+        );
+        self.send_plan(sequence, raw);
+    }
+
+    /// A plan that goes on `ahead_ns` from now with the one that was loaded, `aside_m` beside it.
+    fn continuing(&mut self, sequence: u64, revision: u32, speed_m_s: f64, ahead_ns: u64, aside_m: f64) {
+        let at_s = (self.control.node().plan_time().0 + ahead_ns) as f64 * 1e-9;
+        let raw = format!(
+            r#"{{"format":"trackhold-plan/1","id":"at {speed_m_s}","revision":{revision},"continues":{{"at_s":{at_s}}},
+            "start":{{"x_m":{},"y_m":{aside_m},"heading_rad":0}},"segments":[{{"kind":"line","length_m":400,"speed_m_s":{speed_m_s}}}]}}"#,
+            speed_m_s * at_s
+        );
+        self.send_plan(sequence, raw);
+    }
+
+    fn send_plan(&mut self, sequence: u64, raw: String) {
+        let raw = raw.into_bytes();
         let compiled = compile(&raw, &**self.control.node().vehicle()).map(Box::new);
         let event = PlanEvent { session: 3, sequence, digest: digest::of_bytes(&raw), raw };
         self.ends.plans.push(Event::Plan(event, compiled)).unwrap();
@@ -155,12 +170,12 @@ impl Bench {
 fn thousands_of_ticks_with_poses_orders_and_plans_neither_allocate_nor_free() {
     let mut bench = Bench::new(8192);
     let (mut tracked, mut loaded) = (0, 0);
+    let speed = |k: u64| 0.3 + 0.0001 * (k / 600) as f64;
     for k in 0..6000_u64 {
         bench.pose(k, 0.0005 * (k % 600) as f64);
         match k % 600 {
             // A good plan, the same once more, one that is not fit, a start, plans while tracking, and stops.
-            1 => bench.plan(k, 0.3 + 0.0001 * (k / 600) as f64),
-            3 => bench.plan(k, 0.3 + 0.0001 * (k / 600) as f64),
+            1 | 3 => bench.plan(k, speed(k)),
             5 => bench.plan(k, 30.0),
             10 => {
                 let node = bench.control.node();
@@ -171,6 +186,13 @@ fn thousands_of_ticks_with_poses_orders_and_plans_neither_allocate_nor_free() {
             }
             200 => bench.plan(k, 0.4),
             205 => bench.plan(k, 30.0),
+            // Two that wait and take over, the second of them one that takes the place of a third, and one that steps.
+            250 => bench.continuing(k, 2, speed(k), 30_000_000, 0.0),
+            255 => bench.continuing(k, 3, speed(k), 60_000_000, 0.0),
+            260 => bench.continuing(k, 4, speed(k), 50_000_000, 0.0),
+            265 => bench.continuing(k, 5, speed(k), 50_000_000, 0.5),
+            // And one that still waits when the machine is stopped.
+            395 => bench.continuing(k, 6, speed(k), 900_000_000, 0.0),
             400 => bench.order(k, Order::Stop(StopKind::Controlled)),
             590 => bench.order(k, Order::Stop(StopKind::Emergency)),
             595 => bench.order(k, Order::Reset),
@@ -187,7 +209,7 @@ fn thousands_of_ticks_with_poses_orders_and_plans_neither_allocate_nor_free() {
         tracked += usize::from(bench.control.node().mode() == Mode::Tracking);
         loaded += entries.iter().filter(|entry| matches!(entry.body, Body::PlanLoaded(_))).count();
     }
-    assert!(tracked > 3000 && loaded == 10, "{tracked} ticks tracking, {loaded} plans loaded");
+    assert!(tracked > 3000 && loaded == 30, "{tracked} ticks tracking, {loaded} plans loaded");
     assert_eq!((bench.shared.entries_lost.load(SeqCst), bench.shared.ticks_late.load(SeqCst)), (0, 0));
 }
 

@@ -510,6 +510,9 @@ def site_toml(c):
     rows += ["", "[law]", f'name = "{c["law"]}"', "", "[law.gains]"]
     rows += [f"{k} = {float(v)!r}" for k, v in c["gains"].items()]
     rows += ["", "[node]", f"rate_hz = {c['rate_hz']!r}", ""]
+    if c["vehicle"]["kind"] == "car":
+        # The arcs of these plans join without clothoids; the tables say what a law makes of that.
+        rows += ["[check]", "curvature_step_1_m = 2.0", ""]
     return "\n".join(rows)
 
 

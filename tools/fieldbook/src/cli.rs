@@ -1,6 +1,6 @@
 //! The command line: one line a subcommand; each one's arguments and work are in its own file.
 
-use crate::{demo, orders, record, replay, simulate, status, tail};
+use crate::{check, demo, orders, pack, record, replay, simulate, status, tail};
 use clap::{Parser, Subcommand};
 use std::process::ExitCode;
 
@@ -9,7 +9,7 @@ pub const COULD_NOT_RUN: u8 = 2;
 
 /// Plan, simulate, record and replay the runs of a wheeled robot under trackhold.
 ///
-/// Exit codes: 0 done, 1 refused or not reached (replay: diverged), 2 could not run.
+/// Exit codes: 0 done, 1 refused or not reached (replay: diverged, check: unfit), 2 could not run.
 #[derive(Debug, Parser)]
 #[command(name = "fieldbook", version, propagate_version = true, max_term_width = 100)]
 pub struct Cli {
@@ -21,6 +21,8 @@ pub struct Cli {
 /// The subcommands.
 #[derive(Debug, Subcommand)]
 pub enum Command {
+    /// Can this machine follow this plan? Every limit, joint and direction, and what would mend it.
+    Check(check::Args),
     /// Closed loop in the core, faster than real time.
     Simulate(simulate::Args),
     /// A recorded run once more, compared bit for bit; or what a law would have commanded at recorded poses.
@@ -29,6 +31,8 @@ pub enum Command {
     Demo(demo::Args),
     /// What a daemon is doing.
     Status(status::Args),
+    /// Turns a plan of samples into its compact form.
+    Pack(pack::Args),
     /// Sends a plan to a daemon.
     SendPlan(orders::SendPlanArgs),
     /// Sets the machine in motion along the plan that is loaded.
@@ -50,10 +54,12 @@ impl Command {
     /// Why it could not run; the program then prints that and exits with [`COULD_NOT_RUN`].
     pub fn run(self) -> anyhow::Result<ExitCode> {
         match self {
+            Self::Check(args) => check::run(&args),
             Self::Simulate(args) => simulate::run(&args),
             Self::Replay(args) => replay::run(&args),
             Self::Demo(args) => demo::run(&args),
             Self::Status(args) => status::run(&args),
+            Self::Pack(args) => pack::run(&args),
             Self::SendPlan(args) => orders::run_send_plan(&args),
             Self::Start(args) => orders::run_start(&args),
             Self::Stop(args) => orders::run_stop(&args),

@@ -5,16 +5,19 @@
 //! | [`cli`] | the command line: one line a subcommand |
 //! | [`log`] | track logs, written and read |
 //! | [`choice`] | `--law` and `--gain`: which law follows |
+//! | [`check`] | whether a machine can follow a plan |
 //! | [`simulate`], [`sim`] | closed loop in the core: the command and the loop itself |
 //! | [`stats`] | tracking errors of a run in numbers |
 //! | [`replay`] | a recorded run once more, compared bit for bit |
 //! | [`open_loop`], [`poses`] | what a law would have commanded at given poses |
 //! | [`client`] | the UDP client towards a daemon |
 //! | [`status`], [`orders`] | what a daemon is doing; plan, start, stop, reset |
+//! | [`pack`] | a plan of samples in its compact form |
 //! | [`record`], [`tail`] | a daemon's journal, into a log or as it comes |
 //! | [`demo`] | daemon, stand-in robot and recorder in one command |
 //! | [`output`] | text and tables to the outside |
 
+pub mod check;
 pub mod choice;
 pub mod cli;
 pub mod client;
@@ -23,6 +26,7 @@ pub mod log;
 pub mod open_loop;
 pub mod orders;
 pub mod output;
+pub mod pack;
 pub mod poses;
 pub mod record;
 pub mod replay;

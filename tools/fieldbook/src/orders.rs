@@ -1,30 +1,21 @@
 //! `fieldbook send-plan`, `start`, `stop`, `reset`: orders to a daemon, repeated until their outcome is known.
 
+mod transfer;
+
+pub use transfer::send_plan;
+
 use crate::client::{Answer, Client, DEFAULT_ADDRESS, Pace};
 use crate::output;
 use anyhow::{Context, Result, bail};
 use serde_json::json;
 use std::path::{Path, PathBuf};
 use std::process::ExitCode;
-use std::time::{Duration, Instant};
+use std::time::Duration;
 use trackhold_core::digest;
 use trackhold_proto::Message;
-use trackhold_proto::blob::{Blob, Digest};
-use trackhold_proto::journal::MAX_PLAN_BYTES;
-use trackhold_proto::message::{PART_BYTES, PlanPart, Reset, Start, Status, Stop};
+use trackhold_proto::blob::Digest;
+use trackhold_proto::message::{Reset, Start, Status, Stop};
 use trackhold_proto::words::{StartAt, StopKind};
-
-/// So many parts of a plan are sent, then a pause is made: receive buffers are small.
-const BURST: usize = 32;
-/// The pause.
-const PAUSE: Duration = Duration::from_millis(1);
-/// How long a plan's answer is waited for after the first round; each further round waits longer, for a large plan takes
-/// its time to be checked.
-const FIRST_WAIT: Duration = Duration::from_millis(150);
-/// The longest wait.
-const LONGEST_WAIT: Duration = Duration::from_secs(2);
-/// How often a plan is sent before it is given up.
-const ROUNDS: u32 = 20;
 
 /// A stop that is not acknowledged by then is told of.
 const WARN_AFTER: Duration = Duration::from_millis(300);
@@ -35,8 +26,8 @@ const AFTER_HELP: &str = "Exit codes: 0 accepted, 1 refused, 2 could not run.";
 #[derive(Debug, clap::Args)]
 #[command(after_help = AFTER_HELP)]
 pub struct SendPlanArgs {
-    /// The plan file.
-    #[arg(value_name = "PLAN.json")]
+    /// The plan file: JSON, or the compact form that `pack` makes.
+    #[arg(value_name = "PLAN")]
     pub plan: PathBuf,
     #[command(flatten)]
     to: To,
@@ -93,46 +84,6 @@ struct To {
     /// Print the outcome as one JSON object.
     #[arg(long)]
     json: bool,
-}
-
-/// Sends a plan and returns the daemon's verdict.
-///
-/// # Errors
-/// If the plan has a length that no plan has, or no answer comes.
-pub fn send_plan(client: &mut Client, raw: &[u8]) -> Result<Answer> {
-    if raw.is_empty() || raw.len() > MAX_PLAN_BYTES {
-        bail!("the plan has {} bytes, 1 to {MAX_PLAN_BYTES} can be sent", raw.len());
-    }
-    let digest = digest::of_bytes(raw);
-    let parts: Vec<(u64, Message)> =
-        parts_of(raw, digest).map(|part| (client.next_sequence(), part)).collect();
-    let fits = |ack: &trackhold_proto::message::Ack| ack.order_kind == 2 && ack.plan == digest;
-    let begun = Instant::now();
-    let mut wait = FIRST_WAIT;
-    for round in 1..=ROUNDS {
-        for burst in parts.chunks(BURST) {
-            for (sequence, part) in burst {
-                client.send(*sequence, *part);
-            }
-            let early = parts.len() > BURST;
-            if early && let Some(ack) = client.await_ack(Instant::now() + PAUSE, fits) {
-                return Ok(Answer { ack, round_trip: begun.elapsed(), sent: round });
-            }
-        }
-        if let Some(ack) = client.await_ack(Instant::now() + wait, fits) {
-            return Ok(Answer { ack, round_trip: begun.elapsed(), sent: round });
-        }
-        wait = (wait * 3 / 2).min(LONGEST_WAIT);
-    }
-    Err(client.silent(ROUNDS, begun.elapsed()).context("the plan was not acknowledged"))
-}
-
-fn parts_of(raw: &[u8], digest: Digest) -> impl Iterator<Item = Message> {
-    let total_bytes = u32::try_from(raw.len()).unwrap_or(u32::MAX);
-    (0_u32..).zip(raw.chunks(PART_BYTES)).filter_map(move |(part, chunk)| {
-        let bytes = Blob::new(chunk)?;
-        Some(Message::PlanPart(PlanPart { digest, total_bytes, part_bytes: PART_BYTES as u32, part, bytes }))
-    })
 }
 
 /// Starts the plan with this digest: quotes boot and start number of `status`.

@@ -10,7 +10,7 @@ use crate::cli::COULD_NOT_RUN;
 use crate::log::{Ending, LogError, LogReader};
 use crate::{open_loop, output, poses};
 use anyhow::{Context as _, bail};
-use serde_json::json;
+use serde_json::{Value, json};
 use std::collections::VecDeque;
 use std::io::Read;
 use std::path::PathBuf;
@@ -19,7 +19,7 @@ use thiserror::Error;
 use trackhold_core::BUILD;
 use trackhold_core::digest::ResultDigest;
 use trackhold_core::node::{Event, Node};
-use trackhold_core::plan;
+use trackhold_core::plan::check::admit;
 use trackhold_core::settings::Settings;
 use trackhold_core::time::TimeNs;
 use trackhold_proto::blob::Digest;
@@ -198,10 +198,14 @@ impl Replay {
         Ok(Self { node, made, fresh, frame, digest, boot, begin_ns: at_ns, report })
     }
 
-    /// Compares entry 0. Another build is told apart: it may compute the same all the same.
+    /// Compares entry 0. Another build is told apart: it may compute the same all the same. Keys that are younger than the
+    /// log have their defaults here, and none there.
     fn compare_boot(&mut self, frame: &[u8]) {
         if let Some(Entry { body: Body::Boot(made), .. }) = self.made.front_mut() {
             made.build.clone_from(&self.boot.build);
+            if completes(&made.settings, &self.boot.settings) {
+                made.settings.clone_from(&self.boot.settings);
+            }
         }
         let entry = Entry { number: 0, at_ns: self.begin_ns, body: Body::Boot(self.boot.clone()) };
         self.compare(entry, frame);
@@ -231,7 +235,7 @@ impl Replay {
             Body::Pose(event) => Some(Event::Pose(*event)),
             Body::Exchange(event) => Some(Event::Exchange(*event)),
             Body::Plan(event) => {
-                let compiled = plan::compile(&event.raw, &**self.node.vehicle()).map(Box::new);
+                let compiled = admit(&event.raw, self.node.terms()).map(Box::new);
                 Some(Event::Plan(event.clone(), compiled))
             }
             Body::Order(event) => Some(Event::Order(*event)),
@@ -257,6 +261,22 @@ impl Replay {
 
     fn finish(self, complete: bool) -> Report {
         Report { digest: self.digest.finish(), complete, unfinished: self.made.len(), ..self.report }
+    }
+}
+
+/// True if `whole` says all that `part` says, both JSON, and at most more keys.
+fn completes(whole: &str, part: &str) -> bool {
+    fn within(whole: &Value, part: &Value) -> bool {
+        match (whole, part) {
+            (Value::Object(whole), Value::Object(part)) => {
+                part.iter().all(|(key, value)| whole.get(key).is_some_and(|found| within(found, value)))
+            }
+            _ => whole == part,
+        }
+    }
+    match (serde_json::from_str(whole), serde_json::from_str(part)) {
+        (Ok(whole), Ok(part)) => within(&whole, &part),
+        _ => false,
     }
 }
 

@@ -8,7 +8,7 @@ use std::collections::VecDeque;
 use std::sync::Arc;
 use trackhold_core::time::{SpanNs, TimeNs};
 use trackhold_core::vehicle::{Vehicle, Wheels};
-use trackhold_proto::message::{Command, WheelLayout};
+use trackhold_proto::message::Command;
 
 /// How many sessions the drive remembers having left.
 const LEFT_SESSIONS: usize = 16;
@@ -154,7 +154,7 @@ impl Drive {
     /// What the wheels have to do at a moment. Ask often: nothing else lets a command's time run out.
     pub fn output(&mut self, at: TimeNs) -> Output {
         self.expire(at);
-        let steered = self.vehicle.layout() == WheelLayout::SpeedSteer;
+        let steered = self.vehicle.layout().is_steered();
         match self.held {
             Some(held) if held.live => Output { wheels: held.wheels, commanded: true, hold_steering: false },
             held => Output {
@@ -214,7 +214,7 @@ impl Drive {
         if !command.wheels.iter().all(|value| value.is_finite()) {
             return Taken::NotFinite;
         }
-        if command.valid_ns > self.longest_validity.0 || !self.is_within_limits(&command.wheels) {
+        if command.valid_ns > self.longest_validity.0 || !self.is_within_limits(&in_use(command)) {
             return Taken::BeyondLimit;
         }
         Taken::Taken
@@ -233,13 +233,8 @@ impl Drive {
     }
 
     fn is_within_limits(&self, wheels: &Wheels) -> bool {
-        let speeds = self.vehicle.speed_factor(self.vehicle.body(wheels)) >= 1.0 - ROUNDING;
-        if self.vehicle.layout() != WheelLayout::SpeedSteer {
-            return speeds;
-        }
-        // What the machine makes of the same curvature at a walking pace is the same angle, unless a limit bends it.
-        let reached = self.vehicle.wheels(self.vehicle.body(&[1.0, wheels[1], 0.0, 0.0]), 0.0)[1];
-        speeds && (reached - wheels[1]).abs() <= ROUNDING
+        let greatest = self.vehicle.greatest();
+        wheels.iter().zip(&greatest).all(|(value, bound)| value.abs() <= bound * (1.0 + ROUNDING))
     }
 
     fn leave_session_for(&mut self, session: u64) {

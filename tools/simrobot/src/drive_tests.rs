@@ -1,5 +1,6 @@
 use super::*;
-use crate::testing::{car, differential, unicycle};
+use crate::testing::{car, crossed, differential, front_steered, steered_wheel, unicycle};
+use trackhold_proto::message::WheelLayout;
 use trackhold_proto::words::Mode;
 
 const VALID: u64 = 200_000_000;
@@ -97,6 +98,9 @@ fn what_zero_is_depends_on_the_layout() {
         (car(), WheelLayout::SpeedSteer, [0.1, 0.0], Taken::BeginsMoving),
         (car(), WheelLayout::SpeedSteer, [0.0, 0.601], Taken::BeyondLimit),
         (car(), WheelLayout::SpeedSteer, [0.0, 0.6], Taken::Taken),
+        (front_steered(), WheelLayout::Ackermann, [0.0, 0.6], Taken::Taken),
+        (steered_wheel(), WheelLayout::SteeredWheel, [0.0, -1.6], Taken::Taken),
+        (steered_wheel(), WheelLayout::SteeredWheel, [0.1, 1.5], Taken::BeginsMoving),
     ] {
         assert_eq!(
             drive(vehicle).on_command(TimeNs(0), 1, 1, &command(layout, numbers)),
@@ -220,6 +224,9 @@ fn what_is_not_finite_or_beyond_a_limit_is_refused_and_counted() {
         (unicycle(), WheelLayout::Body, [-2.0, 2.0], [[2.001, 0.0], [0.0, -2.001]]),
         (car(), WheelLayout::SpeedSteer, [-3.0, 0.6], [[3.001, 0.0], [0.0, -0.601]]),
         (car(), WheelLayout::SpeedSteer, [0.0, -0.6], [[1.0, 0.601], [0.0, 2.0]]),
+        (steered_wheel(), WheelLayout::SteeredWheel, [-1.5, 1.6], [[1.501, 0.0], [0.0, -1.601]]),
+        // Left has a gear of 20 and travels second, right one of −30 and travels first.
+        (crossed(), WheelLayout::LeftRight, [600.0, -400.0], [[600.1, 0.0], [0.0, 400.1]]),
     ] {
         let mut drive = begun(vehicle);
         assert_eq!(drive.on_command(TimeNs(0), 1, 1, &command(layout, good)), Taken::Taken, "{layout:?}");
@@ -258,4 +265,18 @@ fn a_steered_machine_holds_its_steering_at_zero() {
     assert_eq!(output, Output { wheels: [0.0, 0.3, 0.0, 0.0], commanded: false, hold_steering: true });
     let standing = command(WheelLayout::SpeedSteer, [0.0, -0.2]);
     assert_eq!(drive.on_command(TimeNs(VALID), 2, 1, &standing), Taken::Taken, "a held steering is rest");
+}
+
+#[test]
+fn three_numbers_are_taken_checked_and_held() {
+    let mut drive = begun(front_steered());
+    let wheels = |third: f64| Command {
+        wheels: [1.0, 0.3, third, 0.0],
+        ..command(WheelLayout::Ackermann, [0.0, 0.0])
+    };
+    assert_eq!(drive.on_command(TimeNs(0), 1, 1, &wheels(0.7)), Taken::BeyondLimit);
+    assert_eq!(drive.on_command(TimeNs(0), 1, 2, &wheels(0.25)), Taken::Taken);
+    assert_eq!(drive.output(TimeNs(1)).wheels, [1.0, 0.3, 0.25, 0.0]);
+    let output = drive.output(TimeNs(VALID));
+    assert_eq!(output, Output { wheels: [0.0, 0.3, 0.25, 0.0], commanded: false, hold_steering: true });
 }

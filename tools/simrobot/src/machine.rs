@@ -343,10 +343,11 @@ impl Machine {
         }
         self.output = output;
         self.robot.advance(at);
-        let mut wheels = output.wheels;
-        if output.hold_steering {
-            wheels[1] = self.robot.plant().wheels()[1];
-        }
+        let wheels = if output.hold_steering {
+            self.robot.plant().with_steering_held(&output.wheels)
+        } else {
+            output.wheels
+        };
         self.robot.command(at, &wheels);
     }
 

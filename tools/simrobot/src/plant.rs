@@ -4,9 +4,10 @@
 //!   exponentials: w(t) = w∞ + (w₀ − w∞) exp(−t/τ).
 //! - While the wheels hold their speed the chassis moves on one exact arc, anchored where they last changed.
 //! - While they change, the motion is made of substeps of [`SUBSTEP`], or a quarter of the shorter lag if that is less,
-//!   counted from the last command that began to act. In each, the way travelled and (but for a car) the turn are
-//!   the exact integrals; a car's turn is Simpson's rule over the substep. The chassis takes them as one arc, which is
-//!   off by at most |v₀ω₁ − v₁ω₀| h²/12 a substep, in the order of a nanometre.
+//!   counted from the last command that began to act. In each, the way travelled and the turn are the exact integrals,
+//!   or Simpson's rule over the substep for the turn of a machine that steers and the way of a steered wheel. The
+//!   chassis takes them as one arc, which is off by at most |v₀ω₁ − v₁ω₀| h²/12 a substep, in the order of a nanometre.
+//! - Behind a drive map the plant knows the machine's own numbers: left is left, whatever the wires say.
 //! - Wheels nearer than [`REACHED`] to what was commanded have reached it at the next substep.
 //! - Asking changes nothing: the true pose of a moment does not depend, to the last bit, on which moments were asked
 //!   for before.
@@ -29,6 +30,9 @@ pub const REACHED: f64 = 1e-9;
 
 /// Below this the wheels count as resting, in the command's own units (rad/s, m/s).
 const REST: f64 = 1e-3;
+
+/// Most numbers of a command that change by themselves.
+const NUMBERS: usize = 3;
 
 /// What the chassis does at a moment: a body velocity with a sideways part.
 #[derive(Clone, Copy, Debug, Default, PartialEq)]
@@ -93,9 +97,10 @@ impl Plant {
         debug_assert!(wheels.iter().all(|value| value.is_finite()), "{wheels:?}");
         self.advance(at);
         let acts = self.now.at + self.dead_time;
+        let wheels = self.vehicle.to_machine(wheels);
         match self.pending.back_mut().filter(|(last, _)| *last == acts) {
-            Some((_, last)) => *last = *wheels,
-            None => self.pending.push_back((acts, *wheels)),
+            Some((_, last)) => *last = wheels,
+            None => self.pending.push_back((acts, wheels)),
         }
         self.act();
     }
@@ -124,7 +129,13 @@ impl Plant {
 
     /// What the wheels really do at that moment, in the layout of a command.
     pub fn wheels(&self) -> Wheels {
-        self.now.wheels
+        self.vehicle.to_drive(&self.now.wheels)
+    }
+
+    /// A command's speeds, with the steering left where it really is at that moment.
+    pub fn with_steering_held(&self, wheels: &Wheels) -> Wheels {
+        let (layout, real) = (self.vehicle.layout(), self.wheels());
+        std::array::from_fn(|index| if layout.is_angle(index) { real[index] } else { wheels[index] })
     }
 
     /// The true body velocity at that moment, without what it slides sideways.
@@ -180,7 +191,7 @@ impl Plant {
     }
 
     /// The state after a substep in which the wheels change.
-    fn substep(&self, span: SpanNs, decays: [Decay; 2]) -> State {
+    fn substep(&self, span: SpanNs, decays: [Decay; NUMBERS]) -> State {
         if span.0 == 0 {
             return self.anchor;
         }
@@ -193,11 +204,15 @@ impl Plant {
         };
         let end = along(|decay| decay.end);
         let mut mean = self.twist(&along(|decay| decay.mean));
-        if self.vehicle.layout() == WheelLayout::SpeedSteer {
+        if self.vehicle.layout().is_steered() {
             let [first, middle, last] =
                 [self.anchor.wheels, along(|decay| decay.middle), end].map(|wheels| self.twist(&wheels).body);
-            let sum = first.turn_rate_rad_s + 4.0 * middle.turn_rate_rad_s + last.turn_rate_rad_s;
-            mean.body.turn_rate_rad_s = sum / 6.0;
+            let simpson =
+                |value: fn(&BodyVelocity) -> f64| (value(&first) + 4.0 * value(&middle) + value(&last)) / 6.0;
+            mean.body.turn_rate_rad_s = simpson(|body| body.turn_rate_rad_s);
+            if self.vehicle.layout() == WheelLayout::SteeredWheel {
+                mean.body.speed_m_s = simpson(|body| body.speed_m_s);
+            }
         }
         self.moved(mean, span, end)
     }
@@ -241,8 +256,16 @@ impl Plant {
             WheelLayout::SpeedSteer => {
                 (wheels[0], wheels[1]) = (wheels[0] * (0.5 * (left + right)), wheels[1] + steer_offset_rad);
             }
+            WheelLayout::Ackermann => {
+                let speed = wheels[0] * (0.5 * (left + right));
+                wheels = [speed, wheels[1] + steer_offset_rad, wheels[2] + steer_offset_rad, 0.0];
+            }
+            // Its one wheel: left and right have the same error.
+            WheelLayout::SteeredWheel => {
+                (wheels[0], wheels[1]) = (wheels[0] * left, wheels[1] + steer_offset_rad);
+            }
         }
-        let mut body = self.vehicle.body(&wheels).scaled(1.0 - slip);
+        let mut body = self.vehicle.body(&self.vehicle.to_drive(&wheels)).scaled(1.0 - slip);
         body.turn_rate_rad_s /= 1.0 + track_error;
         Twist { body, side_m_s: side_drift * body.speed_m_s.abs() }
     }
@@ -252,10 +275,10 @@ impl Plant {
 #[derive(Clone, Copy, Debug)]
 struct Lags {
     /// Time constants, s; 0 for none.
-    time_constant_s: [f64; 2],
+    time_constant_s: [f64; NUMBERS],
     substep: SpanNs,
     /// The decays over a whole substep.
-    whole: [Decay; 2],
+    whole: [Decay; NUMBERS],
 }
 
 /// What is left of the way to the target during a span.
@@ -272,16 +295,16 @@ struct Decay {
 impl Lags {
     fn new(spec: &RobotSpec, layout: WheelLayout) -> Self {
         let wheel = spec.drive.wheel_lag_s;
-        let second = if layout == WheelLayout::SpeedSteer { spec.drive.steer_lag_s } else { wheel };
-        let time_constant_s = [wheel, second];
+        let time_constant_s =
+            std::array::from_fn(|index| if layout.is_angle(index) { spec.drive.steer_lag_s } else { wheel });
         let shortest = time_constant_s.into_iter().filter(|lag| *lag > 0.0).fold(f64::INFINITY, f64::min);
         let substep = SpanNs::from_seconds(0.25 * shortest).min(SUBSTEP);
-        let mut lags = Self { time_constant_s, substep, whole: [Decay::NONE; 2] };
+        let mut lags = Self { time_constant_s, substep, whole: [Decay::NONE; NUMBERS] };
         lags.whole = lags.decays(substep.seconds());
         lags
     }
 
-    fn decays(&self, seconds: f64) -> [Decay; 2] {
+    fn decays(&self, seconds: f64) -> [Decay; NUMBERS] {
         self.time_constant_s.map(|time_constant_s| Decay::over(seconds, time_constant_s))
     }
 

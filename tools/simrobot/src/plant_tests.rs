@@ -1,5 +1,5 @@
 use super::*;
-use crate::testing::{car, differential, unicycle};
+use crate::testing::{car, crossed, differential, front_steered, steered_wheel, unicycle};
 use proptest::prelude::*;
 
 fn plant(spec: &RobotSpec, vehicle: Arc<dyn Vehicle>) -> Plant {
@@ -107,6 +107,43 @@ fn a_car_turns_by_its_true_steering_angle() {
     assert_eq!(plant.wheels(), [2.0, 0.2, 0.0, 0.0], "the offset is not the drive's to see");
 }
 
+#[test]
+fn both_front_wheels_stand_out_of_line() {
+    // ω = v κ with the mean of the curvatures of the true angles; here equal ones, 0.2 + 0.05 each for κ by hand.
+    let spec = chassis(|chassis| chassis.steer_offset_rad = 0.05);
+    let slope = 0.25_f64.tan();
+    let curvature = 0.5 * (slope / (1.2 + slope * 0.4) + slope / (1.2 - slope * 0.4));
+    let pose = after(&spec, front_steered(), [2.0, 0.2, 0.2, 0.0], 1.0);
+    assert!((pose.heading_rad - 2.0 * curvature).abs() < 1e-12, "{pose:?}");
+}
+
+#[test]
+fn a_steered_wheel_pulls_the_chassis_by_its_true_angle_and_radius() {
+    // v = v_s cos δ, ω = v_s sin δ/L, with v_s 1·1.02 and δ 30° of which 0.1 rad is the offset (methods: textbook).
+    let spec = chassis(|chassis| {
+        chassis.steer_offset_rad = 0.1;
+        (chassis.left_radius_error, chassis.right_radius_error) = (0.02, 0.02);
+    });
+    let angle = 30.0_f64.to_radians();
+    let mut plant = plant(&spec, steered_wheel());
+    plant.command(at(0.0), &[1.0, angle - 0.1, 0.0, 0.0]);
+    let body = plant.velocity();
+    assert!((body.speed_m_s - 1.02 * angle.cos()).abs() < 1e-14, "{body:?}");
+    assert!((body.turn_rate_rad_s - 1.02 * angle.sin() / 1.2).abs() < 1e-14, "{body:?}");
+}
+
+#[test]
+fn left_is_left_behind_crossed_wires() {
+    // Left 5 rad/s at a gear of 20, right 4 rad/s at −30, and the two change places.
+    let spec = chassis(|chassis| chassis.left_radius_error = 0.1);
+    let mut plant = plant(&spec, crossed());
+    plant.command(at(0.0), &[-120.0, 100.0, 0.0, 0.0]);
+    let body = plant.velocity();
+    assert!((body.speed_m_s - 0.5 * (0.55 + 0.4)).abs() < 1e-14, "{body:?}");
+    assert!((body.turn_rate_rad_s - (0.4 - 0.55) / 0.5).abs() < 1e-14, "{body:?}");
+    assert_eq!(plant.wheels(), [-120.0, 100.0, 0.0, 0.0], "in the drive's terms");
+}
+
 fn lagging(wheel_lag_s: f64, steer_lag_s: f64) -> RobotSpec {
     let mut spec = RobotSpec::default();
     (spec.drive.wheel_lag_s, spec.drive.steer_lag_s) = (wheel_lag_s, steer_lag_s);
@@ -130,16 +167,17 @@ fn a_lag_answers_a_step_as_the_exponential_says() {
 }
 
 /// Tiny steps with the exact wheel speeds, midpoint rule.
-fn finely(vehicle: &dyn Vehicle, from: Wheels, to: Wheels, lags: [f64; 2], seconds: f64) -> Pose {
+fn finely(vehicle: &dyn Vehicle, to: Wheels, lags: [f64; 2], seconds: f64) -> Pose {
     let (mut pose, steps) = (Pose::default(), 400_000);
     let h = seconds / f64::from(steps);
     for step in 0..steps {
         let t = (f64::from(step) + 0.5) * h;
         let wheel = |index: usize| {
-            let left = if lags[index] == 0.0 { 0.0 } else { (-t / lags[index]).exp() };
-            to[index] + (from[index] - to[index]) * left
+            let lag = lags[index.min(1)];
+            let left = if lag == 0.0 { 0.0 } else { (-t / lag).exp() };
+            to[index] * (1.0 - left)
         };
-        pose = pose.moved(vehicle.body(&[wheel(0), wheel(1), 0.0, 0.0]), h);
+        pose = pose.moved(vehicle.body(&[wheel(0), wheel(1), wheel(2), 0.0]), h);
     }
     pose
 }
@@ -152,10 +190,13 @@ fn motion_under_a_lag_agrees_with_tiny_steps() {
         (car(), [2.0, 0.5, 0.0, 0.0], [0.2, 0.1]),
         (car(), [2.0, -0.5, 0.0, 0.0], [0.0, 0.003]),
         (car(), [2.0, 0.4, 0.0, 0.0], [0.3, 0.0]),
+        (front_steered(), [2.0, 0.45, 0.35, 0.0], [0.2, 0.1]),
+        (steered_wheel(), [1.5, 1.0, 0.0, 0.0], [0.1, 0.2]),
+        (crossed(), [240.0, -90.0, 0.0, 0.0], [0.1, 0.1]),
     ] {
-        let steer = if vehicle.layout() == WheelLayout::SpeedSteer { lags[1] } else { 0.0 };
+        let steer = if vehicle.layout().is_steered() { lags[1] } else { 0.0 };
         let pose = after(&lagging(lags[0], steer), vehicle.clone(), wheels, 1.0);
-        let fine = finely(&*vehicle, [0.0; 4], wheels, lags, 1.0);
+        let fine = finely(&*vehicle, wheels, lags, 1.0);
         assert!(pose.distance_to(fine) < 1e-7, "{vehicle:?}: {pose:?} {fine:?}");
         assert!((pose.heading_rad - fine.heading_rad).abs() < 1e-7, "{vehicle:?}: {pose:?} {fine:?}");
     }

@@ -49,7 +49,7 @@ section! {
         right_radius_error: "", 0.0, Bound::within(-0.5, 0.5),
             "the right wheel's true radius over the stated one, minus 1";
         track_error: "", 0.0, Bound::within(-0.5, 0.5),
-            "the true effective track width over the stated one, minus 1; not for a car";
+            "the true effective track width over the stated one, minus 1; not for machines that steer";
         slip: "", 0.0, Bound::within(-0.5, 0.9),
             "share of the wheels' travel that is lost";
         side_drift: "", 0.0, Bound::within(-0.5, 0.5),
@@ -204,7 +204,7 @@ impl RobotSpec {
             }
         };
         let (drive, chassis) = (&self.drive, &self.chassis);
-        if layout != WheelLayout::SpeedSteer {
+        if !layout.is_steered() {
             demand(
                 drive.steer_lag_s == 0.0,
                 "drive.steer_lag_s",
@@ -216,12 +216,20 @@ impl RobotSpec {
                 "this machine does not steer; leave it out",
             );
         } else {
-            let what = "a car's turn rate does not depend on its track; leave it out";
+            let what = "the turn rate of a machine that steers does not depend on its track; leave it out";
             demand(chassis.track_error == 0.0, "chassis.track_error", what);
         }
         if layout == WheelLayout::Body {
             let what = "a unicycle states no track, so wheels of different size turn it by an unknown rate; give left \
                         and right the same error";
+            demand(
+                chassis.left_radius_error == chassis.right_radius_error,
+                "chassis.left_radius_error",
+                what,
+            );
+        }
+        if layout == WheelLayout::SteeredWheel {
+            let what = "only one wheel drives; give left and right the same error";
             demand(
                 chassis.left_radius_error == chassis.right_radius_error,
                 "chassis.left_radius_error",

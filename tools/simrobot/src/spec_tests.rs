@@ -1,5 +1,5 @@
 use super::*;
-use crate::testing::{car, differential, unicycle};
+use crate::testing::{car, differential, front_steered, steered_wheel, unicycle};
 
 fn refused(text: &str) -> String {
     RobotSpec::parse(text, "robot.toml").unwrap_err().to_string()
@@ -89,6 +89,9 @@ fn what_means_nothing_for_a_machine_is_refused() {
     let radius = "[chassis]\nleft_radius_error = 0.1\n";
     assert_eq!(key(radius, &*unicycle()).as_deref(), Some("chassis.left_radius_error"));
     assert_eq!(key(radius, &*car()), None);
+    assert_eq!(key(radius, &*steered_wheel()).as_deref(), Some("chassis.left_radius_error"));
+    assert_eq!(key(track, &*steered_wheel()).as_deref(), Some("chassis.track_error"));
+    assert_eq!(key(steer, &*front_steered()), None);
 }
 
 #[test]

@@ -7,6 +7,7 @@ mod samson;
 use crate::geometry::{BodyVelocity, Direction, Pose, TrackingError};
 use crate::keys::{Key, Problem, Values};
 use crate::plan::Reference;
+use crate::plan::check::Following;
 use crate::plan::segment::Travel;
 use alloc::boxed::Box;
 use alloc::format;
@@ -50,9 +51,16 @@ pub struct Domain {
     pub forward: bool,
     /// False if the law would turn the machine round in reverse.
     pub reverse: bool,
+    /// True if the law corrects the heading also while the reference rests or turns on the spot.
+    pub at_rest: bool,
 }
 
 impl Domain {
+    /// The domain as a plan's check asks for it.
+    pub const fn following(&self) -> Following {
+        Following { forward: self.forward, reverse: self.reverse, at_rest: self.at_rest }
+    }
+
     /// Whether a plan's ways of driving lie in the domain: the direction that does not, as "reverse?".
     pub const fn unfit_direction(&self, travel: Travel) -> Option<bool> {
         if travel.forward && !self.forward {

@@ -116,7 +116,12 @@ impl Law for OffAxle {
     }
 
     fn domain(&self) -> Domain {
-        Domain { max_heading_error_rad: math::PI, forward: self.x_p_m > 0.0, reverse: self.x_p_m < 0.0 }
+        Domain {
+            max_heading_error_rad: math::PI,
+            forward: self.x_p_m > 0.0,
+            reverse: self.x_p_m < 0.0,
+            at_rest: true,
+        }
     }
 
     fn settle(&mut self, input: &Input, limited: bool, seconds: f64) {

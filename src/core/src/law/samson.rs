@@ -66,6 +66,6 @@ impl Law for Samson {
     }
 
     fn domain(&self) -> Domain {
-        Domain { max_heading_error_rad: MAX_HEADING_ERROR_RAD, forward: true, reverse: true }
+        Domain { max_heading_error_rad: MAX_HEADING_ERROR_RAD, forward: true, reverse: true, at_rest: false }
     }
 }

@@ -10,6 +10,7 @@
 //! | `clock`, `intake` | poses: senders' clocks, lease, freshness |
 //! | `orders` | start gates, stop, reset, plans, acknowledgements |
 //! | `mode` | the mode table |
+//! | `successors` | plans that continue the one in force |
 //! | `run` | following a plan: its clock, ramps, settling |
 //! | `tick` | one control period |
 
@@ -19,6 +20,7 @@ pub mod mode;
 mod orders;
 pub mod params;
 mod run;
+mod successors;
 mod tick;
 
 use crate::BUILD;
@@ -26,6 +28,7 @@ use crate::geometry::Mount;
 use crate::keys::Problem;
 use crate::law::Law;
 use crate::plan::Plan;
+use crate::plan::check::Terms;
 use crate::settings::Settings;
 use crate::time::{SpanNs, TimeNs};
 use crate::vehicle::{Vehicle, Wheels};
@@ -38,6 +41,7 @@ use mode::{Trigger, Verdict, follow};
 use orders::OrderMemory;
 use params::Params;
 use run::Run;
+use successors::Successors;
 use trackhold_proto::blob::BootId;
 use trackhold_proto::journal::{
     Body, Boot, Entry, ExchangeEvent, ModeChange, Note, OrderEvent, PlanEvent, PoseEvent, PoseRefused,
@@ -55,7 +59,7 @@ pub enum Event {
     Pose(PoseEvent),
     /// An exchange of stamps was completed.
     Exchange(ExchangeEvent),
-    /// A plan arrived, with what [`crate::plan::compile`] made of its bytes for this machine.
+    /// A plan arrived, with what [`crate::plan::check::admit`] made of its bytes on this node's terms.
     Plan(PlanEvent, Result<Box<Plan>, Vec<String>>),
     /// An order arrived.
     Order(OrderEvent),
@@ -90,6 +94,7 @@ pub struct Node {
     law: Box<dyn Law>,
     mount: Mount,
     params: Params,
+    terms: Terms,
     at: TimeNs,
     next_entry: u64,
     ticks: u64,
@@ -99,6 +104,7 @@ pub struct Node {
     numbers: StartNumbers,
     poses: PoseIntake,
     plan: Option<Box<Plan>>,
+    successors: Successors,
     planner: Option<Lease>,
     orders: OrderMemory,
     run: Run,
@@ -143,12 +149,14 @@ impl Node {
     ) -> Result<Self, Vec<Problem>> {
         let checked = settings.checked()?;
         let begin = Boot { boot, seed, settings: checked.settings.to_json(), build: BUILD.to_string() };
+        let terms = checked.terms();
         let mut node = Self {
             boot,
             vehicle: checked.vehicle,
             law: checked.law,
             mount: checked.mount,
             params: checked.params,
+            terms,
             at,
             next_entry: 0,
             ticks: 0,
@@ -158,6 +166,7 @@ impl Node {
             numbers: StartNumbers::new(seed),
             poses: PoseIntake::default(),
             plan: None,
+            successors: Successors::new(),
             planner: None,
             orders: OrderMemory::default(),
             run: Run::default(),
@@ -205,12 +214,12 @@ impl Node {
         self.numbers.current
     }
 
-    /// The plan loaded.
+    /// The plan in force.
     pub fn plan(&self) -> Option<&Plan> {
         self.plan.as_deref()
     }
 
-    /// The plan time reached, s.
+    /// The plan time reached: one clock for a plan and those that continue it.
     pub fn plan_time(&self) -> SpanNs {
         self.run.plan_time()
     }
@@ -218,6 +227,11 @@ impl Node {
     /// The machine.
     pub fn vehicle(&self) -> &Arc<dyn Vehicle> {
         &self.vehicle
+    }
+
+    /// What a plan has to fit to be taken: see [`crate::plan::check::admit`].
+    pub fn terms(&self) -> &Terms {
+        &self.terms
     }
 
     /// The node's numbers.
@@ -276,6 +290,9 @@ impl Node {
 
     fn emit_change(&mut self, change: Option<ModeChange>, sink: &mut impl Sink) {
         if let Some(change) = change {
+            if !matches!(change.to, Mode::Tracking | Mode::ControlledStop) {
+                self.successors.clear(sink);
+            }
             self.emit(Body::ModeChange(change), sink);
         }
     }

@@ -2,6 +2,7 @@
 
 use super::intake::Lease;
 use super::mode::{Trigger, Verdict, follow};
+use super::successors::JointStep;
 use super::{Node, Sink};
 use crate::geometry::Pose;
 use crate::law::Input;
@@ -11,7 +12,7 @@ use alloc::boxed::Box;
 use alloc::string::String;
 use alloc::vec::Vec;
 use trackhold_proto::blob::{Digest, Text};
-use trackhold_proto::journal::{AckEffect, Body, Order, OrderEvent, PlanEvent, PlanLoaded};
+use trackhold_proto::journal::{AckEffect, Body, Order, OrderEvent, PlanEvent, PlanLoaded, PlanWaits};
 use trackhold_proto::message::Start;
 use trackhold_proto::words::{Cause, Mode, Refusal, StartAt, StopKind};
 
@@ -82,16 +83,9 @@ impl Node {
     ) {
         let (session, sequence, digest) = (event.session, event.sequence, event.digest);
         self.emit(Body::Plan(event), sink);
-        let (refusal, findings) = match (self.admit_plan(session, digest), compiled) {
-            (Ok(true), Ok(plan)) => {
-                self.load(plan, sink);
-                (None, Vec::new())
-            }
-            (Ok(false), Ok(same)) => {
-                sink.retire(same);
-                (None, Vec::new())
-            }
-            (Ok(_), Err(findings)) => (Some(Refusal::PlanUnfit), findings),
+        let (refusal, findings) = match (self.admit_planner(session), compiled) {
+            (Ok(()), Ok(plan)) => (self.take_plan(plan, sink).err(), Vec::new()),
+            (Ok(()), Err(findings)) => (Some(Refusal::PlanUnfit), findings),
             (Err(refusal), Ok(plan)) => {
                 sink.retire(plan);
                 (Some(refusal), Vec::new())
@@ -106,33 +100,73 @@ impl Node {
         self.emit(Body::Ack(ack), sink);
     }
 
-    /// Whether a plan may be loaded; false if it is loaded already.
-    fn admit_plan(&self, session: u64, digest: Digest) -> Result<bool, Refusal> {
-        if let Some(planner) = self.planner {
-            planner.admits(session, self.at, self.params.planner_lease)?;
+    fn admit_planner(&self, session: u64) -> Result<(), Refusal> {
+        self.planner.map_or(Ok(()), |planner| planner.admits(session, self.at, self.params.planner_lease))
+    }
+
+    /// Loads a plan, or lets it wait for its plan time; one that is known changes nothing.
+    fn take_plan(&mut self, plan: Box<Plan>, sink: &mut impl Sink) -> Result<(), Refusal> {
+        let known = self.plan.as_ref().is_some_and(|loaded| loaded.digest() == plan.digest())
+            || self.successors.holds(plan.digest());
+        let admitted = match plan.continues_at() {
+            _ if known => Ok(None),
+            Some(at) => self.admit_successor(&plan, at).map(|step| Some((at, step))),
+            None if matches!(self.mode, Mode::Tracking | Mode::ControlledStop) => {
+                Err(Refusal::Mode { mode: self.mode })
+            }
+            None => {
+                self.load(plan, sink);
+                return Ok(());
+            }
+        };
+        let Ok(Some((at, step))) = admitted else {
+            sink.retire(plan);
+            return admitted.map(|_| ());
+        };
+        let (digest, revision) = (plan.digest(), plan.revision());
+        self.successors.take(plan, sink);
+        let waits = PlanWaits {
+            digest,
+            revision,
+            at_ns: at.0,
+            position_step_m: step.position_m,
+            curvature_step_1_m: step.curvature_1_m,
+            waiting: self.successors.count() as u32,
+        };
+        self.emit(Body::PlanWaits(waits), sink);
+        Ok(())
+    }
+
+    fn admit_successor(&self, plan: &Plan, at: SpanNs) -> Result<JointStep, Refusal> {
+        let nothing = Refusal::NothingToContinue { mode: self.mode };
+        let in_force = self.plan.as_deref().filter(|_| self.mode == Mode::Tracking).ok_or(nothing)?;
+        if let Some(reverse) = self.law.domain().unfit_direction(plan.travel()) {
+            return Err(Refusal::LawDirection { reverse });
         }
-        if self.plan.as_ref().is_some_and(|plan| plan.digest() == digest) {
-            return Ok(false);
-        }
-        match self.mode {
-            Mode::Tracking | Mode::ControlledStop => Err(Refusal::Mode { mode: self.mode }),
-            _ => Ok(true),
-        }
+        let reached = self.run.plan_time();
+        self.successors.admit(plan, at, (in_force, reached), &*self.vehicle, &self.params)
     }
 
     fn load(&mut self, plan: Box<Plan>, sink: &mut impl Sink) {
+        self.successors.begin(plan.revision(), sink);
+        self.run.begin(plan.begin(), self.at);
+        if let Some(old) = self.plan.replace(plan) {
+            sink.retire(old);
+        }
+        self.emit_loaded(sink);
+    }
+
+    /// Tells which plan is in force from now on.
+    pub(super) fn emit_loaded(&mut self, sink: &mut impl Sink) {
+        let Some(plan) = self.plan.as_deref() else { return };
         let loaded = PlanLoaded {
             digest: plan.digest(),
             id: Text::cut(plan.id()),
             revision: plan.revision(),
             open: plan.is_open(),
-            duration_ns: plan.duration().0,
+            duration_ns: plan.end().0,
             length_m: plan.length_m(),
         };
-        if let Some(old) = self.plan.replace(plan) {
-            sink.retire(old);
-        }
-        self.run.begin(SpanNs(0), self.at);
         self.emit(Body::PlanLoaded(loaded), sink);
     }
 
@@ -170,7 +204,7 @@ impl Node {
             return Err(Refusal::StalePose { age_ns: age.0, limit_ns: self.params.pose_timeout.0 });
         }
         let begin = begin_time(start, plan, estimate.pose, self.run.plan_time())?;
-        let input = Input::new(plan.at(begin.seconds(), &mut 0), estimate.pose);
+        let input = Input::new(plan.at((begin - plan.begin()).seconds(), &mut 0), estimate.pose);
         let distance_m = input.pose.distance_to(input.reference.pose);
         if distance_m > self.params.start_distance_m {
             return Err(Refusal::TooFar { distance_m, limit_m: self.params.start_distance_m });
@@ -224,10 +258,13 @@ impl Node {
 
 fn begin_time(start: &Start, plan: &Plan, pose: Pose, reached: SpanNs) -> Result<SpanNs, Refusal> {
     match start.at {
-        StartAt::Beginning => Ok(SpanNs(0)),
-        StartAt::Nearest => Ok(SpanNs::from_seconds(plan.nearest_time_s(pose, reached.seconds()))),
-        StartAt::PlanTime if start.plan_time_ns > plan.duration().0 => {
-            Err(Refusal::PlanTime { plan_time_ns: start.plan_time_ns, duration_ns: plan.duration().0 })
+        StartAt::Beginning => Ok(plan.begin()),
+        StartAt::Nearest => {
+            let reached_s = (reached - plan.begin()).seconds();
+            Ok(plan.begin() + SpanNs::from_seconds(plan.nearest_time_s(pose, reached_s)))
+        }
+        StartAt::PlanTime if !(plan.begin().0..=plan.end().0).contains(&start.plan_time_ns) => {
+            Err(Refusal::PlanTime { plan_time_ns: start.plan_time_ns, duration_ns: plan.end().0 })
         }
         StartAt::PlanTime => Ok(SpanNs(start.plan_time_ns)),
     }

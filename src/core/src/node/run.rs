@@ -39,6 +39,16 @@ impl Run {
         *self = Self { time, at, rate: 1.0, ..Self::default() };
     }
 
+    /// Goes on with another plan on the same clock.
+    pub(super) fn change_plan(&mut self) {
+        self.cursor = 0;
+    }
+
+    /// The place on the plan's own clock, which begins with the plan.
+    fn place_s(&self, plan: &Plan) -> f64 {
+        (self.time - plan.begin()).seconds()
+    }
+
     pub(super) fn plan_time(&self) -> SpanNs {
         self.time
     }
@@ -61,7 +71,7 @@ impl Run {
 
     /// Slows the plan's time so that the reference brakes along its path with a share of the machine's deceleration.
     pub(super) fn ramp_down(&mut self, plan: &Plan, vehicle: &dyn Vehicle, share: f64, seconds: f64) {
-        let reference = plan.at(self.time.seconds(), &mut self.cursor);
+        let reference = plan.at(self.place_s(plan), &mut self.cursor);
         let (speed, turn_rate) =
             (reference.velocity.speed_m_s.abs(), reference.velocity.turn_rate_rad_s.abs());
         self.rate_change_1_s = if speed > RESTING {
@@ -80,7 +90,7 @@ impl Run {
 
     /// The reference at the plan's time.
     pub(super) fn reference(&mut self, plan: &Plan) -> Reference {
-        let reference = plan.at(self.time.seconds(), &mut self.cursor);
+        let reference = plan.at(self.place_s(plan), &mut self.cursor);
         if self.rate == 1.0 { reference } else { reference.slowed(self.rate, self.rate_change_1_s) }
     }
 

@@ -1,5 +1,7 @@
 //! Orders, guards and closed loops against the node, with an ideal machine.
 
+mod continuing;
+
 use super::*;
 use crate::geometry::{BodyVelocity, Pose};
 use crate::plan::compile;
@@ -35,6 +37,7 @@ fn settings(node: &[(&str, f64)]) -> Settings {
         law: LawSettings { name: "kanayama".to_string(), gains: Values::default() },
         node: values(node),
         pose: Values::default(),
+        check: Values::default(),
     }
 }
 
@@ -76,18 +79,22 @@ impl Rig {
     fn load(&mut self, segments: &str, open: bool) -> Option<Refusal> {
         let raw = alloc::format!(
             r#"{{"format":"trackhold-plan/1","id":"t","revision":1,"open":{open},"start":{{"x_m":0,"y_m":0,"heading_rad":0}},"segments":[{segments}]}}"#
-        )
-        .into_bytes();
-        let compiled = compile(&raw, &**self.node.vehicle()).map(Box::new);
-        let digest = digest::of_bytes(&raw);
-        self.sequence += 1;
-        let plan = PlanEvent { session: 5, sequence: self.sequence, digest, raw };
-        self.event(Event::Plan(plan, compiled));
-        let refusal = self.last_ack().refusal;
+        );
+        let refusal = self.send(&raw);
         if refusal.is_none() {
-            self.digest = digest;
+            self.digest = digest::of_bytes(raw.as_bytes());
         }
         refusal
+    }
+
+    /// A plan's bytes, as they are.
+    fn send(&mut self, raw: &str) -> Option<Refusal> {
+        let raw = raw.as_bytes().to_vec();
+        let compiled = compile(&raw, &**self.node.vehicle()).map(Box::new);
+        self.sequence += 1;
+        let digest = digest::of_bytes(&raw);
+        self.event(Event::Plan(PlanEvent { session: 5, sequence: self.sequence, digest, raw }, compiled));
+        self.last_ack().refusal
     }
 
     fn order(&mut self, order: Order) -> Option<Refusal> {

@@ -17,11 +17,13 @@ impl Node {
         let mut record = TickRecord::blank(self.vehicle.layout());
         record.flags = self.poses.take_warnings();
         let pose = self.see_pose(at, &mut record);
-        let mut change = None;
+        let (mut change, mut taken_over) = (None, false);
         match self.mode {
             Mode::Standby | Mode::EmergencyStop => self.wheels = self.vehicle.zero(&self.wheels),
             Mode::ProtectiveStop => self.wheels = self.protective_wheels(at),
             Mode::Tracking | Mode::ControlledStop => {
+                self.run.advance(at);
+                taken_over = self.take_over(sink);
                 change = self.follow_plan(at, seconds, pose, &mut record)
             }
         }
@@ -36,7 +38,20 @@ impl Node {
         self.ticks += 1;
         self.last_tick = Some(at);
         self.emit(Body::Tick(record), sink);
+        if taken_over {
+            self.emit_loaded(sink);
+        }
         self.emit_change(change, sink);
+    }
+
+    /// Goes over to the plan whose plan time was reached, if there is one.
+    fn take_over(&mut self, sink: &mut impl Sink) -> bool {
+        let Some(next) = self.successors.due(self.run.plan_time(), sink) else { return false };
+        if let Some(old) = self.plan.replace(next) {
+            sink.retire(old);
+        }
+        self.run.change_plan();
+        true
     }
 
     /// The time over which the limits count: a late tick may not step farther than a punctual one, an early one only as
@@ -73,7 +88,6 @@ impl Node {
         pose: Option<Pose>,
         record: &mut TickRecord,
     ) -> Option<ModeChange> {
-        self.run.advance(at);
         let Some(pose) = pose else { return self.guard_protective(at, Cause::StalePose) };
         let Some(reference) = self.next_reference(seconds) else {
             unreachable!("a start needs a plan, and none is taken away while one is followed")
@@ -121,8 +135,9 @@ impl Node {
     /// How long ago a closed plan ended.
     fn past_end(&self) -> Option<SpanNs> {
         let plan = self.plan.as_deref().filter(|plan| !plan.is_open())?;
-        let (reached, duration) = (self.run.plan_time(), plan.duration());
-        (reached >= duration).then(|| reached - duration)
+        let (reached, end) = (self.run.plan_time(), plan.end());
+        // A plan that waits then goes on within a microsecond, see `successors`.
+        (reached >= end && self.successors.count() == 0).then(|| reached - end)
     }
 
     /// Whether the run is over, or an open plan has run dry.
@@ -135,11 +150,9 @@ impl Node {
             };
             return self.change(Trigger::CameToRest, cause);
         }
-        let dry = self
-            .plan
-            .as_deref()
-            .is_some_and(|plan| plan.is_open() && self.run.plan_time() >= plan.duration());
-        if dry && self.mode == Mode::Tracking {
+        let dry =
+            self.plan.as_deref().is_some_and(|plan| plan.is_open() && self.run.plan_time() >= plan.end());
+        if dry && self.successors.count() == 0 && self.mode == Mode::Tracking {
             record.flags |= flag::PLAN_DRY;
             return self.change(Trigger::GuardControlled, Cause::PlanRanDry);
         }

@@ -5,14 +5,27 @@
 //! [`segment::KINDS`].
 
 mod brake;
+pub mod check;
+mod clothoid;
+mod compact;
 mod compile;
 mod curve;
 mod file;
+mod lookup;
 mod nearest;
+mod nurbs;
+mod path;
 mod pivot;
+mod points;
+mod profile;
 mod samples;
 pub mod segment;
+mod spans;
+mod spline;
+mod stated;
+mod timing;
 
+pub use compact::pack;
 pub use compile::compile;
 pub use file::FORMAT;
 
@@ -37,6 +50,9 @@ pub struct Reference {
     /// Curvature of the path, positive where the heading turns left as the machine moves ahead, 1/m. Where the
     /// reference rests, what it was just before; 0 on a pivot.
     pub curvature_1_m: f64,
+    /// Change of the curvature per metre of progress, which counts up in reverse too, 1/m². 0 on lines, arcs and pivots,
+    /// and where a plan rests before its beginning or after its end.
+    pub curvature_rate_1_m2: f64,
     /// Rate of the speed, m/s².
     pub accel_m_s2: f64,
     /// Rate of the turn rate, rad/s².
@@ -51,6 +67,7 @@ impl Reference {
             direction: Direction::of(pose.heading_rad),
             velocity: BodyVelocity::ZERO,
             curvature_1_m,
+            curvature_rate_1_m2: 0.0,
             accel_m_s2: 0.0,
             turn_accel_rad_s2: 0.0,
         }
@@ -74,7 +91,11 @@ pub struct Plan {
     id: String,
     revision: u32,
     open: bool,
+    /// The start that the plan file states; the first segment begins there within the tolerance.
+    start: Pose,
+    begin: Option<SpanNs>,
     digest: Digest,
+    travel: segment::Travel,
     slots: Vec<Slot>,
     duration_s: f64,
     length_m: f64,
@@ -85,9 +106,25 @@ pub struct Plan {
 /// A segment in its place on the plan's clock.
 #[derive(Debug)]
 struct Slot {
+    kind: &'static str,
     begin_s: f64,
     stretch: Box<dyn Stretch>,
     brake: Option<Brake>,
+}
+
+/// A segment of a compiled plan, as checks, retiming and pictures look at it.
+#[derive(Clone, Copy, Debug)]
+pub struct Placed<'a> {
+    /// Its index in the plan's list of segments.
+    pub index: usize,
+    /// Its kind's name in the plan file.
+    pub kind: &'static str,
+    /// Begin on the plan's clock, s.
+    pub begin_s: f64,
+    /// Duration, the braking at a closed plan's end included, s.
+    pub duration_s: f64,
+    /// Its geometry, and its timing as the plan file states it (without the braking at a closed plan's end).
+    pub stretch: &'a dyn Stretch,
 }
 
 impl Slot {
@@ -120,6 +157,22 @@ impl Plan {
         self.open
     }
 
+    /// The plan time at which it goes on with the clock of the plan it continues; none for a plan of its own. The
+    /// times that the methods here take and give count from the beginning of this plan all the same.
+    pub fn continues_at(&self) -> Option<SpanNs> {
+        self.begin
+    }
+
+    /// What the clock of its run shows where it begins.
+    pub fn begin(&self) -> SpanNs {
+        self.begin.unwrap_or_default()
+    }
+
+    /// What the clock of its run shows where it ends.
+    pub fn end(&self) -> SpanNs {
+        self.begin() + self.duration()
+    }
+
     /// SHA-256 of the bytes it was compiled from.
     pub fn digest(&self) -> Digest {
         self.digest
@@ -145,13 +198,20 @@ impl Plan {
         self.slots.iter().map(|slot| slot.begin_s)
     }
 
+    /// The segments in their order.
+    pub fn stretches(&self) -> impl Iterator<Item = Placed<'_>> {
+        self.slots.iter().enumerate().map(|(index, slot)| Placed {
+            index,
+            kind: slot.kind,
+            begin_s: slot.begin_s,
+            duration_s: slot.duration_s(),
+            stretch: &*slot.stretch,
+        })
+    }
+
     /// Which ways the plan drives.
     pub fn travel(&self) -> segment::Travel {
-        let mut travel = segment::Travel::default();
-        for slot in &self.slots {
-            travel = travel.with(slot.stretch.travel());
-        }
-        travel
+        self.travel
     }
 
     /// The reference at plan time `t_s`. Before the beginning it rests at the first pose; after the end of a closed plan
@@ -181,6 +241,7 @@ impl Plan {
         Reference {
             pose,
             direction: Direction::of(pose.heading_rad),
+            curvature_rate_1_m2: 0.0,
             accel_m_s2: 0.0,
             turn_accel_rad_s2: 0.0,
             ..self.end

@@ -6,12 +6,12 @@ use crate::math;
 use alloc::vec::Vec;
 
 /// How many places of the plan are looked at first.
-const MOST_MILESTONES: usize = 8192;
+const MOST_MILESTONES: usize = 4096;
 /// Milestones lie no closer than this, s.
-const CLOSEST_S: f64 = 0.1;
+const CLOSEST_S: f64 = 0.25;
 /// How many places are looked at between the milestones beside the best one.
 const SCAN: u32 = 256;
-/// Halvings of the last interval: 256 places in 0.2 s are 0.8 ms apart, 2⁻³⁰ of that is below a picosecond.
+/// Halvings of the last interval: 256 places in 0.5 s are 2 ms apart, 2⁻³⁰ of that is below a picosecond.
 const REFINEMENTS: usize = 45;
 /// A heading error of a right angle weighs as much as this distance, m: where a path crosses itself, the branch that the
 /// machine points along counts.

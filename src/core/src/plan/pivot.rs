@@ -1,7 +1,9 @@
 //! Pivots and dwells: segments that stay where they are.
 
 use super::Reference;
-use super::segment::{Kind, Progress, Stretch, Travel, Uniform};
+use super::profile::{self, PIVOT_KEYS};
+use super::segment::{Kind, Progress, Stretch, Travel};
+use super::timing::Timing;
 use crate::geometry::{BodyVelocity, Direction, Pose};
 use crate::keys::{Bound, Key, Problem};
 use crate::math;
@@ -10,8 +12,10 @@ use alloc::boxed::Box;
 use alloc::string::String;
 use alloc::vec;
 
+/// Stands for the turn acceleration of a machine that cannot pivot, until its plan is refused.
+pub(super) const AT_ONCE_RAD_S2: f64 = 1e9;
+
 pub(super) const PIVOT: Kind = Kind {
-    name: "pivot",
     keys: &[
         Key::required(
             "turn_rad",
@@ -19,59 +23,42 @@ pub(super) const PIVOT: Kind = Kind {
             Bound::within(-1000.0, 1000.0),
             "change of heading, positive to the left",
         ),
-        Key::required(
-            "rate_rad_s",
-            "rad/s",
-            Bound::within(0.0, 30.0),
-            "turn rate from the first instant, positive",
-        ),
-        Key::optional(
-            "end_rate_rad_s",
-            "rad/s",
-            Bound::within(0.0, 30.0),
-            "turn rate at the end, reached at constant acceleration; without it the rate stays",
-        ),
+        PIVOT_KEYS[0],
+        PIVOT_KEYS[1],
+        PIVOT_KEYS[2],
+        PIVOT_KEYS[3],
+        PIVOT_KEYS[4],
+        PIVOT_KEYS[5],
     ],
-    reversible: false,
-    has_points: false,
-    build: |_, values, joint| {
-        let (turn, begin) = (values.get("turn_rad"), values.get("rate_rad_s"));
-        let end = values.find("end_rate_rad_s").unwrap_or(begin);
+    timed: true,
+    ..Kind::plain("pivot", |raw, values, joint| {
+        let turn = values.get("turn_rad");
         if turn == 0.0 {
             return Err(vec![Problem::new(
                 "turn_rad",
                 "0 rad is no turn; leave the segment out, or use a dwell",
             )]);
         }
-        if begin + end == 0.0 {
-            return Err(vec![Problem::new(
-                "rate_rad_s",
-                "0 rad/s at both ends never gets anywhere; give a rate",
-            )]);
-        }
-        let timing = Uniform::new(turn.abs(), begin, end);
+        let timing = profile::build(raw, values, turn.abs(), &profile::TURNING)?;
         Ok(Box::new(Pivot { start: joint.pose, sign: turn.signum(), timing }))
-    },
+    })
 };
 
 pub(super) const DWELL: Kind = Kind {
-    name: "dwell",
     keys: &[Key::required("duration_s", "s", Bound::positive(86_400.0), "how long to rest")],
-    reversible: false,
-    has_points: false,
-    build: |_, values, joint| {
+    ..Kind::plain("dwell", |_, values, joint| {
         Ok(Box::new(Dwell {
             rest: Reference::at_rest(joint.pose, joint.curvature_1_m),
             duration_s: values.get("duration_s"),
         }))
-    },
+    })
 };
 
 #[derive(Debug)]
 struct Pivot {
     start: Pose,
     sign: f64,
-    timing: Uniform,
+    timing: Timing,
 }
 
 impl Stretch for Pivot {
@@ -98,6 +85,7 @@ impl Stretch for Pivot {
             direction: Direction::of(heading_rad),
             velocity: BodyVelocity { speed_m_s: 0.0, turn_rate_rad_s: self.sign * progress.rate },
             curvature_1_m: 0.0,
+            curvature_rate_1_m2: 0.0,
             accel_m_s2: 0.0,
             turn_accel_rad_s2: self.sign * progress.accel,
         }
@@ -108,8 +96,8 @@ impl Stretch for Pivot {
     }
 
     fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64 {
-        // A machine that cannot pivot has no plan with one: `first_excess` refused it.
-        vehicle.pivot_accel_rad_s2().unwrap_or(f64::INFINITY)
+        // A machine that cannot pivot has no plan with one: `first_excess`, or the check, refuses it.
+        vehicle.pivot_accel_rad_s2().unwrap_or(AT_ONCE_RAD_S2)
     }
 
     fn brake_from_s(&self, exit: f64, decel: f64) -> Option<f64> {

@@ -7,6 +7,9 @@
 
 use super::Reference;
 use super::file::{RawPoint, RawSegment};
+use super::lookup::Lookup;
+use super::path::check_join;
+use super::points::{self, Form};
 use super::segment::{Joint, Kind, Progress, Stretch, Travel};
 use crate::geometry::{BodyVelocity, Direction, Pose};
 use crate::keys::{Problem, Values};
@@ -17,20 +20,18 @@ use alloc::format;
 use alloc::string::String;
 use alloc::vec::Vec;
 
-/// The first point must meet the previous segment's end within this distance, m.
-pub(super) const JOIN_DISTANCE_M: f64 = 0.02;
-/// The first point must meet the previous segment's end within this angle, rad.
-pub(super) const JOIN_HEADING_RAD: f64 = 0.02;
-
 /// Two points closer than this are one place, m.
 const SAME_PLACE_M: f64 = 1e-6;
 /// Below this speed the curve's own direction is rounding noise; the points' headings are used, m/s.
 const SLOW_M_S: f64 = 1e-6;
+/// A sweep looks no more often than this between two points.
+const MOST_LOOKS: usize = 64;
 /// Below this speed a curvature says nothing about a machine's limits, m/s.
 const CRAWL_M_S: f64 = 0.02;
 
-pub(super) const SAMPLES: Kind =
-    Kind { name: "samples", keys: &[], reversible: false, has_points: true, build };
+pub(super) const SAMPLES: Kind = Kind { has_points: true, ..Kind::plain("samples", build) };
+
+const FORM: Form = Form { needs: &["t_s", "heading_rad"], may: &["speed_m_s", "turn_rate_rad_s"] };
 
 /// A way-pose with everything known about it.
 #[derive(Clone, Copy, Debug)]
@@ -47,15 +48,13 @@ struct Point {
 #[derive(Debug)]
 struct Samples {
     points: Vec<Point>,
+    lookup: Lookup,
     path_length_m: f64,
 }
 
 fn build(raw: &RawSegment, _values: &Values, joint: Joint) -> Result<Box<dyn Stretch>, Vec<Problem>> {
     let given = raw.points.as_deref().unwrap_or_default();
-    let problems = check(given, joint);
-    if !problems.is_empty() {
-        return Err(problems);
-    }
+    check(given, joint)?;
     let begin_s = given[0].t_s;
     let mut points: Vec<Point> = given
         .iter()
@@ -80,32 +79,14 @@ fn build(raw: &RawSegment, _values: &Values, joint: Joint) -> Result<Box<dyn Str
         }
         points[index].progress = points[index - 1].progress + extent;
     }
-    Ok(Box::new(Samples { points, path_length_m }))
+    let lookup =
+        Lookup::new(points.iter().map(|point| point.t_s), points.len(), points[points.len() - 1].t_s);
+    Ok(Box::new(Samples { points, lookup, path_length_m }))
 }
 
-fn check(given: &[RawPoint], joint: Joint) -> Vec<Problem> {
+fn check(given: &[RawPoint], joint: Joint) -> Result<(), Vec<Problem>> {
+    points::check(given, 2, &FORM)?;
     let mut problems = Vec::new();
-    if given.len() < 2 {
-        problems.push(Problem::new("points", format!("{} of them, give at least two", given.len())));
-        return problems;
-    }
-    for (index, point) in given.iter().enumerate() {
-        for (name, value, bound) in [
-            ("t_s", point.t_s, 1e9),
-            ("x_m", point.x_m, 1e7),
-            ("y_m", point.y_m, 1e7),
-            ("heading_rad", point.heading_rad, 1e6),
-            ("speed_m_s", point.speed_m_s.unwrap_or(0.0), 30.0),
-            ("turn_rate_rad_s", point.turn_rate_rad_s.unwrap_or(0.0), 30.0),
-        ] {
-            if !value.is_finite() || value.abs() > bound {
-                problems.push(Problem::new(
-                    &format!("points[{index}].{name}"),
-                    format!("{value} lies outside ±{bound}"),
-                ));
-            }
-        }
-    }
     for (index, pair) in given.windows(2).enumerate() {
         // A step below a microsecond is a slip of the planner, and its speeds would be nonsense.
         if pair[1].t_s - pair[0].t_s < 1e-6 {
@@ -114,18 +95,13 @@ fn check(given: &[RawPoint], joint: Joint) -> Vec<Problem> {
                 pair[1].t_s, pair[0].t_s
             );
             problems.push(Problem::new(&format!("points[{}].t_s", index + 1), what));
+            if problems.len() >= super::compile::MAX_FINDINGS {
+                break;
+            }
         }
     }
-    let first = Pose::new(given[0].x_m, given[0].y_m, given[0].heading_rad);
-    let (distance, turn) =
-        (first.distance_to(joint.pose), math::wrap(first.heading_rad - joint.pose.heading_rad).abs());
-    if distance > JOIN_DISTANCE_M || turn > JOIN_HEADING_RAD {
-        let what = format!(
-            "{distance:.4} m and {turn:.4} rad from the end of the segment before (or the plan's start), at most {JOIN_DISTANCE_M} m and {JOIN_HEADING_RAD} rad are allowed"
-        );
-        problems.push(Problem::new("points[0]", what));
-    }
-    problems
+    problems.extend(check_join(Pose::new(given[0].x_m, given[0].y_m, given[0].heading_rad), joint).err());
+    if problems.is_empty() { Ok(()) } else { Err(problems) }
 }
 
 /// Derivative of the parabola through three neighbouring positions, projected on the point's heading, m/s.
@@ -161,6 +137,8 @@ struct Piece<'a> {
     from: &'a Point,
     to: &'a Point,
     seconds: f64,
+    /// One over that; multiplications cost a tick less than divisions.
+    rate_1_s: f64,
     on_the_spot: bool,
     /// 1 forward, −1 in reverse.
     sign: f64,
@@ -168,19 +146,21 @@ struct Piece<'a> {
 
 impl<'a> Piece<'a> {
     fn between(from: &'a Point, to: &'a Point) -> Self {
-        let chord = from.pose.distance_to(to.pose);
-        let on_the_spot =
-            chord < SAME_PLACE_M && from.speed_m_s.abs() < SAME_PLACE_M && to.speed_m_s.abs() < SAME_PLACE_M;
+        let on_the_spot = from.speed_m_s.abs() < SAME_PLACE_M
+            && to.speed_m_s.abs() < SAME_PLACE_M
+            && from.pose.distance_to(to.pose) < SAME_PLACE_M;
         let mut ahead = from.speed_m_s + to.speed_m_s;
         if ahead.abs() < SLOW_M_S {
             ahead = from.direction.into_frame(to.pose.x_m - from.pose.x_m, to.pose.y_m - from.pose.y_m).0;
         }
         let sign = if ahead < 0.0 { -1.0 } else { 1.0 };
-        Self { from, to, seconds: to.t_s - from.t_s, on_the_spot, sign }
+        let seconds = to.t_s - from.t_s;
+        Self { from, to, seconds, rate_1_s: 1.0 / seconds, on_the_spot, sign }
     }
 
-    /// Position, velocity and acceleration at the share `u` of the piece's time.
-    fn motion(&self, u: f64) -> [(f64, f64); 3] {
+    /// Position, velocity, acceleration and its rate at the share `u` of the piece's time.
+    fn motion(&self, u: f64) -> [(f64, f64); 4] {
+        let rate = self.rate_1_s;
         let along = |p0: f64, p1: f64, v0: f64, v1: f64| {
             let (m0, m1) = (v0 * self.seconds, v1 * self.seconds);
             // Coefficients of the cubic p0 + m0 u + b u² + a u³.
@@ -188,15 +168,16 @@ impl<'a> Piece<'a> {
             let a = 2.0 * (p0 - p1) + m0 + m1;
             [
                 p0 + u * (m0 + u * (b + u * a)),
-                (m0 + u * (2.0 * b + u * 3.0 * a)) / self.seconds,
-                (2.0 * b + 6.0 * a * u) / (self.seconds * self.seconds),
+                (m0 + u * (2.0 * b + u * 3.0 * a)) * rate,
+                (2.0 * b + 6.0 * a * u) * (rate * rate),
+                6.0 * a * (rate * rate * rate),
             ]
         };
         let (v0, v1) = (self.from.speed_m_s, self.to.speed_m_s);
         let (d0, d1) = (self.from.direction, self.to.direction);
         let x = along(self.from.pose.x_m, self.to.pose.x_m, v0 * d0.cos, v1 * d1.cos);
         let y = along(self.from.pose.y_m, self.to.pose.y_m, v0 * d0.sin, v1 * d1.sin);
-        [(x[0], y[0]), (x[1], y[1]), (x[2], y[2])]
+        [(x[0], y[0]), (x[1], y[1]), (x[2], y[2]), (x[3], y[3])]
     }
 
     /// Change of heading from the first point to the second, the short way round.
@@ -208,30 +189,35 @@ impl<'a> Piece<'a> {
         if self.on_the_spot {
             return self.spot_reference(u);
         }
-        let [(x_m, y_m), (vx, vy), (ax, ay)] = self.motion(u);
+        let [(x_m, y_m), (vx, vy), (ax, ay), (jx, jy)] = self.motion(u);
         let square = vx * vx + vy * vy;
         let speed = math::sqrt(square);
         if speed < SLOW_M_S {
             let heading = math::wrap(self.from.pose.heading_rad + u * self.turn());
             return Reference::at_rest(Pose::new(x_m, y_m, heading), 0.0);
         }
-        let direction = Direction { cos: self.sign * vx / speed, sin: self.sign * vy / speed };
-        let curve_turn_rate = (vx * ay - vy * ax) / square;
-        let turn_rate = self.stated_turn_rate(u).unwrap_or(curve_turn_rate);
+        let (per_speed, per_square) = (self.sign / speed, 1.0 / square);
+        let direction = Direction { cos: vx * per_speed, sin: vy * per_speed };
+        let curve_turn_rate = (vx * ay - vy * ax) * per_square;
+        let gaining = (vx * ax + vy * ay) * per_square;
+        let gain = (vx * jy - vy * jx) * per_square;
+        let (turn_rate, turn_accel) =
+            self.stated_turn_rate(u).unwrap_or((curve_turn_rate, gain - 2.0 * curve_turn_rate * gaining));
         Reference {
-            pose: Pose::new(x_m, y_m, math::wrap(math::atan2(direction.sin, direction.cos))),
+            pose: Pose::new(x_m, y_m, math::wrap(math::atan2(self.sign * vy, self.sign * vx))),
             direction,
             velocity: BodyVelocity { speed_m_s: self.sign * speed, turn_rate_rad_s: turn_rate },
-            curvature_1_m: self.sign * curve_turn_rate / speed,
-            accel_m_s2: self.sign * (vx * ax + vy * ay) / speed,
-            turn_accel_rad_s2: 0.0,
+            curvature_1_m: curve_turn_rate * per_speed,
+            curvature_rate_1_m2: self.sign * (gain - 3.0 * curve_turn_rate * gaining) * per_square,
+            accel_m_s2: (vx * ax + vy * ay) * per_speed,
+            turn_accel_rad_s2: turn_accel,
         }
     }
 
-    /// The planner's own word on the turn rate, where it gave one at both ends.
-    fn stated_turn_rate(&self, u: f64) -> Option<f64> {
+    /// The planner's own word on the turn rate, where it gave one at both ends, and the turn acceleration that follows.
+    fn stated_turn_rate(&self, u: f64) -> Option<(f64, f64)> {
         let (from, to) = (self.from.turn_rate_rad_s?, self.to.turn_rate_rad_s?);
-        Some(from + u * (to - from))
+        Some((from + u * (to - from), (to - from) / self.seconds))
     }
 
     /// On the spot the heading is a cubic with the stated turn rates at its ends, or turns steadily.
@@ -256,7 +242,7 @@ impl<'a> Piece<'a> {
         if self.on_the_spot {
             return self.spot_reference(u).velocity.turn_rate_rad_s.abs();
         }
-        let [_, (vx, vy), _] = self.motion(u);
+        let [_, (vx, vy), ..] = self.motion(u);
         math::length(vx, vy)
     }
 
@@ -302,14 +288,13 @@ impl Samples {
     }
 
     /// The piece in force at `t_s`; at a point the later one.
-    fn piece_at(&self, t_s: f64) -> (usize, f64) {
-        let index = self
-            .points
-            .partition_point(|point| point.t_s <= t_s)
-            .saturating_sub(1)
-            .min(self.points.len() - 2);
-        let from = self.points[index].t_s;
-        (index, ((t_s - from) / (self.points[index + 1].t_s - from)).clamp(0.0, 1.0))
+    fn piece_at(&self, t_s: f64) -> (Piece<'_>, f64) {
+        let (low, high) = self.lookup.range(t_s);
+        let begun = low + self.points[low..high].partition_point(|point| point.t_s <= t_s);
+        let index = begun.saturating_sub(1).min(self.points.len() - 2);
+        let piece = self.piece(index);
+        let u = ((t_s - piece.from.t_s) * piece.rate_1_s).clamp(0.0, 1.0);
+        (piece, u)
     }
 }
 
@@ -327,8 +312,7 @@ impl Stretch for Samples {
     }
 
     fn timing(&self, t_s: f64) -> Progress {
-        let (index, u) = self.piece_at(t_s);
-        let piece = self.piece(index);
+        let (piece, u) = self.piece_at(t_s);
         let reference = piece.reference(u);
         let accel =
             if piece.on_the_spot { reference.turn_accel_rad_s2 } else { piece.sign * reference.accel_m_s2 };
@@ -349,14 +333,31 @@ impl Stretch for Samples {
         Reference {
             velocity: literal.velocity.scaled(factor),
             accel_m_s2: if piece.on_the_spot { 0.0 } else { piece.sign * progress.accel },
-            turn_accel_rad_s2: progress.accel * literal.velocity.turn_rate_rad_s / rate,
+            turn_accel_rad_s2: progress.accel * literal.velocity.turn_rate_rad_s / rate
+                + piece.sign * literal.curvature_rate_1_m2 * progress.rate * progress.rate,
             ..literal
         }
     }
 
     fn at(&self, t_s: f64) -> Reference {
-        let (index, u) = self.piece_at(t_s);
-        self.piece(index).reference(u)
+        let (piece, u) = self.piece_at(t_s);
+        piece.reference(u)
+    }
+
+    fn sweep(&self, steps: usize, visit: &mut dyn FnMut(f64, &Reference)) {
+        let pieces = self.points.len() - 1;
+        let looks = (steps / pieces).clamp(2, MOST_LOOKS);
+        for index in 0..pieces {
+            let piece = self.piece(index);
+            for look in 0..=looks {
+                let u = look as f64 / looks as f64;
+                visit(piece.from.t_s + u * piece.seconds, &piece.reference(u));
+            }
+        }
+    }
+
+    fn way_poses(&self, visit: &mut dyn FnMut(f64, Pose)) {
+        self.points.iter().for_each(|point| visit(point.t_s, point.pose));
     }
 
     fn travel(&self) -> Travel {
@@ -372,7 +373,7 @@ impl Stretch for Samples {
     fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64 {
         let last = self.points.len() - 2;
         if self.piece(last).on_the_spot {
-            return vehicle.pivot_accel_rad_s2().unwrap_or(f64::INFINITY);
+            return vehicle.pivot_accel_rad_s2().unwrap_or(super::pivot::AT_ONCE_RAD_S2);
         }
         // Only the bends that a stop from the end's speed could reach count; twice that distance is safely all of them.
         let exit = self.points[last + 1].speed_m_s;

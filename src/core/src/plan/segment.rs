@@ -1,7 +1,7 @@
 //! What every segment kind gives: a stretch of geometry with its literal timing.
 
 use super::file::RawSegment;
-use super::{Reference, curve, pivot, samples};
+use super::{Reference, clothoid, curve, nurbs, pivot, samples, spline};
 use crate::geometry::Pose;
 use crate::keys::{Key, Problem, Values};
 use crate::vehicle::Vehicle;
@@ -63,12 +63,29 @@ pub trait Stretch: Debug + Send + Sync {
     /// Which ways it drives.
     fn travel(&self) -> Travel;
 
+    /// Where, strictly inside, the curvature or its rate may step: progress, rising. Computed on request, not for a tick.
+    fn seams(&self) -> Vec<f64> {
+        Vec::new()
+    }
+
     /// The deceleration with which this machine can brake anywhere on it, m/s² (rad/s²).
     fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64;
 
     /// The last instant at which the literal timing is no faster than a braking curve that ends the stretch at the rate
     /// `exit` with the deceleration `decel`; none if it is faster everywhere.
     fn brake_from_s(&self, exit: f64, decel: f64) -> Option<f64>;
+
+    /// Visits the literal timing from beginning to end in about `steps` intervals of equal length; where the stretch
+    /// consists of pieces, both ends of each.
+    fn sweep(&self, steps: usize, visit: &mut dyn FnMut(f64, &Reference)) {
+        for step in 0..=steps {
+            let t_s = self.duration_s() * step as f64 / steps.max(1) as f64;
+            visit(t_s, &self.at(t_s));
+        }
+    }
+
+    /// Visits the way-poses that it was made from, as they were stated, each with its time from the beginning, s.
+    fn way_poses(&self, _visit: &mut dyn FnMut(f64, Pose)) {}
 
     /// The first instant at which the literal timing asks for more than this machine's speed limits, and the excess in
     /// words.
@@ -82,6 +99,9 @@ pub struct Joint {
     pub pose: Pose,
     /// The curvature there, 1/m.
     pub curvature_1_m: f64,
+    /// True if a segment that states its own place is refused where it does not meet this pose; false where the check
+    /// looks at the gap.
+    pub strict: bool,
 }
 
 /// A segment kind in the table.
@@ -95,72 +115,37 @@ pub struct Kind {
     pub(super) reversible: bool,
     /// True if it has points.
     pub(super) has_points: bool,
+    /// Its lists of numbers.
+    pub(super) lists: &'static [&'static str],
+    /// True if it may state a profile or a timing point by point.
+    pub(super) timed: bool,
     /// Builds it from checked values.
     pub(super) build: Build,
+}
+
+impl Kind {
+    /// A kind of path, reversible and timed, without points and lists; its keys are still to be named.
+    pub(super) const fn path(name: &'static str, build: Build) -> Self {
+        Self { name, keys: &[], reversible: true, has_points: false, lists: &[], timed: true, build }
+    }
+
+    /// A kind without direction of travel, timing, points and lists of its own.
+    pub(super) const fn plain(name: &'static str, build: Build) -> Self {
+        Self { name, keys: &[], reversible: false, has_points: false, lists: &[], timed: false, build }
+    }
 }
 
 /// Builds a segment from its raw form and its checked numbers.
 pub(super) type Build = fn(&RawSegment, &Values, Joint) -> Result<Box<dyn Stretch>, Vec<Problem>>;
 
 /// All segment kinds.
-pub const KINDS: &[Kind] = &[curve::LINE, curve::ARC, pivot::PIVOT, pivot::DWELL, samples::SAMPLES];
-
-/// Constant acceleration over a stretch: the timing of lines, arcs and pivots.
-#[derive(Clone, Copy, Debug)]
-pub(super) struct Uniform {
-    extent: f64,
-    begin_rate: f64,
-    accel: f64,
-    duration_s: f64,
-}
-
-impl Uniform {
-    /// From one rate to another over `extent`; at least one of the rates is positive.
-    pub(super) fn new(extent: f64, begin_rate: f64, end_rate: f64) -> Self {
-        Self {
-            extent,
-            begin_rate,
-            accel: (end_rate * end_rate - begin_rate * begin_rate) / (2.0 * extent),
-            duration_s: 2.0 * extent / (begin_rate + end_rate),
-        }
-    }
-
-    pub(super) fn extent(&self) -> f64 {
-        self.extent
-    }
-
-    pub(super) fn duration_s(&self) -> f64 {
-        self.duration_s
-    }
-
-    pub(super) fn fastest(&self) -> (f64, f64) {
-        if self.accel > 0.0 {
-            (self.duration_s, self.begin_rate + self.accel * self.duration_s)
-        } else {
-            (0.0, self.begin_rate)
-        }
-    }
-
-    pub(super) fn at(&self, t_s: f64) -> Progress {
-        Progress {
-            at: t_s * (self.begin_rate + 0.5 * self.accel * t_s),
-            rate: self.begin_rate + self.accel * t_s,
-            accel: self.accel,
-        }
-    }
-
-    /// See [`Stretch::brake_from_s`]. Both v² are linear in progress, so they cross at most once.
-    pub(super) fn brake_from_s(&self, exit: f64, decel: f64) -> Option<f64> {
-        let end_square = self.begin_rate * self.begin_rate + 2.0 * self.accel * self.extent;
-        if end_square <= exit * exit {
-            return Some(self.duration_s);
-        }
-        let ahead = exit * exit + 2.0 * decel * self.extent - self.begin_rate * self.begin_rate;
-        if ahead < 0.0 {
-            return None;
-        }
-        let at = ahead / (2.0 * (self.accel + decel));
-        let rate = crate::math::sqrt((self.begin_rate * self.begin_rate + 2.0 * self.accel * at).max(0.0));
-        Some(2.0 * at / (self.begin_rate + rate).max(f64::MIN_POSITIVE))
-    }
-}
+pub const KINDS: &[Kind] = &[
+    curve::LINE,
+    curve::ARC,
+    clothoid::CLOTHOID,
+    spline::SPLINE,
+    nurbs::NURBS,
+    pivot::PIVOT,
+    pivot::DWELL,
+    samples::SAMPLES,
+];

@@ -9,6 +9,9 @@ use alloc::format;
 use alloc::sync::Arc;
 use alloc::vec::Vec;
 
+mod curves;
+mod timing;
+
 fn machine(kind: &str, pairs: &[(&str, f64)]) -> Arc<dyn Vehicle> {
     let mut values = Values::default();
     for (key, value) in pairs {
@@ -47,12 +50,18 @@ fn at(plan: &Plan, t_s: f64) -> Reference {
     plan.at(t_s, &mut 0)
 }
 
-/// The reference's velocity must be the derivative of its pose, everywhere but at the instants given.
+/// Velocity, acceleration and curvature rate must be the derivatives they claim to be, everywhere but at the instants
+/// given.
 fn assert_consistent(plan: &Plan, jumps: &[f64]) {
+    assert_consistent_but(plan, jumps, 2e-6);
+}
+
+/// Likewise, but within `room_s` of the instants given.
+fn assert_consistent_but(plan: &Plan, jumps: &[f64], room_s: f64) {
     let h = 1e-6;
     for step in 0..2000 {
         let t = plan.duration_s() * (f64::from(step) + 0.37) / 2000.0;
-        if jumps.iter().any(|jump| (jump - t).abs() < 2.0 * h) {
+        if jumps.iter().any(|jump| (jump - t).abs() < room_s) {
             continue;
         }
         let (before, here, after) = (at(plan, t - h), at(plan, t), at(plan, t + h));
@@ -64,6 +73,17 @@ fn assert_consistent(plan: &Plan, jumps: &[f64]) {
         assert!((turn / (2.0 * h) - here.velocity.turn_rate_rad_s).abs() < 1e-6, "turn at {t}: {here:?}");
         let curving = here.velocity.speed_m_s * here.curvature_1_m;
         assert!(here.velocity.speed_m_s == 0.0 || (curving - here.velocity.turn_rate_rad_s).abs() < 1e-9);
+        let rate = |value: fn(&Reference) -> f64| (value(&after) - value(&before)) / (2.0 * h);
+        let accel = rate(|it| it.velocity.speed_m_s);
+        assert!((accel - here.accel_m_s2).abs() < 1e-6, "acceleration at {t}: {accel} {here:?}");
+        let turn_accel = rate(|it| it.velocity.turn_rate_rad_s);
+        assert!(
+            (turn_accel - here.turn_accel_rad_s2).abs() < 1e-6,
+            "turn acceleration at {t}: {turn_accel} {here:?}"
+        );
+        let bending = rate(|it| it.curvature_1_m);
+        let expected = here.curvature_rate_1_m2 * here.velocity.speed_m_s.abs();
+        assert!((bending - expected).abs() < 1e-6, "curvature rate at {t}: {bending} {here:?}");
     }
 }
 
@@ -263,7 +283,10 @@ fn bad_plans_are_refused_with_place_value_and_bound() {
         (r#"{"kind":"line","length_m":1,"speed_m_s":1,"turn_rad":1}"#, "(line).turn_rad: no such key here"),
         (r#"{"kind":"line","length_m":"1","speed_m_s":1}"#, "length_m is not a number"),
         (r#"{"kind":"line","length_m":1,"length_m":1,"speed_m_s":1}"#, "length_m is given twice"),
-        (r#"{"kind":"loop","length_m":1}"#, "no such segment; known are line, arc, pivot, dwell, samples"),
+        (
+            r#"{"kind":"loop","length_m":1}"#,
+            "no such segment; known are line, arc, clothoid, spline, nurbs, pivot, dwell, samples",
+        ),
         (r#"{"length_m":1}"#, "missing field `kind`"),
         (r#"{"kind":"arc","radius_m":1,"turn_rad":0,"speed_m_s":1}"#, "an arc of 0 m"),
         (

@@ -80,8 +80,14 @@ struct From {
 }
 
 impl Intake {
-    /// An intake that has received nothing yet.
-    pub fn new(ends: Ends, outlet: Outlet, zero: Arc<ZeroSide>, shared: Arc<Shared>) -> Self {
+    /// An intake that has received nothing yet and takes plans up to a length.
+    pub fn new(
+        ends: Ends,
+        outlet: Outlet,
+        zero: Arc<ZeroSide>,
+        shared: Arc<Shared>,
+        max_plan_bytes: usize,
+    ) -> Self {
         Self {
             ends,
             outlet,
@@ -90,7 +96,7 @@ impl Intake {
             leases: Leases::default(),
             drives: Drives::default(),
             drives_told: true,
-            assembler: Assembler::default(),
+            assembler: Assembler::new(max_plan_bytes),
             exchanges: Exchanges::default(),
             tally: Tally::default(),
             cares: 0,
@@ -179,7 +185,8 @@ impl Intake {
             | Message::JournalGone(_)
             | Message::Subscribed(_)
             | Message::Status(_)
-            | Message::TimeRequest(_) => count(&self.shared.misdirected),
+            | Message::TimeRequest(_)
+            | Message::PlanMissing(_) => count(&self.shared.misdirected),
         }
     }
 
@@ -201,6 +208,17 @@ impl Intake {
         match self.assembler.part(session, sequence, part, at) {
             Outcome::Waits => {}
             Outcome::Again => self.ends.mail.post(Letter::PlanAgain { session, digest: part.digest, peer }),
+            Outcome::Missing(missing) => self.ends.mail.post(Letter::Missing(peer, missing)),
+            Outcome::TooLong => {
+                let order = OrderKey { session, sequence, kind: PLAN_KIND };
+                let text = format!(
+                    "the plan has {} bytes, net.max_plan_bytes allows {}: send it in stretches, or in the compact form",
+                    part.total_bytes,
+                    self.assembler.max_plan_bytes()
+                );
+                self.ends.mail.post(Letter::AckTo(order, peer));
+                self.ends.mail.post(Letter::PlanRefused { order, digest: part.digest, text });
+            }
             Outcome::Whole(whole) => {
                 self.ends.mail.post(Letter::AckTo(OrderKey { session, sequence, kind: PLAN_KIND }, peer));
                 if self.ends.jobs.try_send(whole).is_err() {

@@ -5,9 +5,9 @@
 
 use std::collections::{BTreeMap, VecDeque};
 use trackhold_core::time::TimeNs;
-use trackhold_proto::blob::Digest;
+use trackhold_proto::blob::{Blob, Digest};
 use trackhold_proto::journal::MAX_PLAN_BYTES;
-use trackhold_proto::message::PlanPart;
+use trackhold_proto::message::{MARK_BYTES, PlanMissing, PlanPart};
 
 /// So many sessions can be sending a plan.
 const MAX_TRANSFERS: usize = 4;
@@ -15,8 +15,12 @@ const MAX_TRANSFERS: usize = 4;
 const MAX_HELD_BYTES: usize = 2 * MAX_PLAN_BYTES;
 /// So many finished transfers are remembered, to know their parts when they are repeated.
 const MAX_FINISHED: usize = 16;
+/// So many plans that were too long are remembered, to tell each of them now and then only.
+const MAX_REFUSED: usize = 8;
 /// A repetition is passed on only once in this time: a planner that sends all parts again wants one answer.
 const REPETITION_NS: u64 = 50_000_000;
+/// What is missing is told only once in this time.
+const MISSING_NS: u64 = 10_000_000;
 /// Parts in a chunk: one bit each in a word.
 const CHUNK_PARTS: u32 = 64;
 
@@ -25,10 +29,14 @@ const CHUNK_PARTS: u32 = 64;
 pub enum Outcome {
     /// It was kept, or known already; the plan is not whole yet.
     Waits,
+    /// The last part or a repetition came, and others are missing: the planner can be told which.
+    Missing(Box<PlanMissing>),
     /// The plan is whole.
     Whole(Whole),
     /// It repeats a part of a transfer that was finished before, whose outcome is to be told again.
     Again,
+    /// It belongs to a plan that is longer than allowed. Nothing of it is kept.
+    TooLong,
 }
 
 /// A plan's bytes, whole.
@@ -45,10 +53,12 @@ pub struct Whole {
 }
 
 /// Puts parts together.
-#[derive(Debug, Default)]
+#[derive(Debug)]
 pub struct Assembler {
+    max_plan_bytes: usize,
     transfers: Vec<Transfer>,
     finished: VecDeque<Finished>,
+    refused: VecDeque<Finished>,
 }
 
 #[derive(Debug)]
@@ -60,6 +70,7 @@ struct Transfer {
     last_sequence: u64,
     last_at: TimeNs,
     missing: u32,
+    told_missing: Option<TimeNs>,
     held_bytes: usize,
     chunks: BTreeMap<u32, Chunk>,
 }
@@ -79,9 +90,29 @@ struct Finished {
     told_at: TimeNs,
 }
 
+impl Default for Assembler {
+    fn default() -> Self {
+        Self::new(MAX_PLAN_BYTES)
+    }
+}
+
 impl Assembler {
+    /// One that takes plans up to a length.
+    pub fn new(max_plan_bytes: usize) -> Self {
+        let (transfers, finished, refused) = Default::default();
+        Self { max_plan_bytes, transfers, finished, refused }
+    }
+
+    /// The longest plan it takes, bytes.
+    pub fn max_plan_bytes(&self) -> usize {
+        self.max_plan_bytes
+    }
+
     /// Takes a part in.
     pub fn part(&mut self, session: u64, sequence: u64, part: &PlanPart, at: TimeNs) -> Outcome {
+        if part.total_bytes as usize > self.max_plan_bytes {
+            return self.refuse(session, sequence, part.digest, at);
+        }
         if let Some(finished) = self.finished_before(session, sequence, part.digest) {
             if at.since(finished.told_at).0 < REPETITION_NS {
                 return Outcome::Waits;
@@ -93,10 +124,11 @@ impl Assembler {
         let transfer = &mut self.transfers[index];
         transfer.last_sequence = transfer.last_sequence.max(sequence);
         transfer.last_at = at;
-        transfer.keep(part);
+        let is_new = transfer.keep(part);
         if transfer.missing > 0 {
+            let missing = transfer.tell_missing(part, is_new, at);
             self.make_room(session);
-            return Outcome::Waits;
+            return missing.map_or(Outcome::Waits, |missing| Outcome::Missing(Box::new(missing)));
         }
         let transfer = self.transfers.swap_remove(index);
         self.remember(Finished {
@@ -111,6 +143,24 @@ impl Assembler {
     /// Forgets that a transfer was finished, so that its parts, repeated, begin it anew.
     pub fn forget(&mut self, session: u64, digest: Digest) {
         self.finished.retain(|finished| finished.session != session || finished.digest != digest);
+    }
+
+    /// A plan that is too long: its first part is answered, and those that follow now and then.
+    fn refuse(&mut self, session: u64, sequence: u64, digest: Digest, at: TimeNs) -> Outcome {
+        let known =
+            self.refused.iter_mut().find(|refused| refused.session == session && refused.digest == digest);
+        if let Some(refused) = known {
+            if at.since(refused.told_at).0 < REPETITION_NS {
+                return Outcome::Waits;
+            }
+            refused.told_at = at;
+            return Outcome::Again;
+        }
+        if self.refused.len() >= MAX_REFUSED {
+            self.refused.pop_front();
+        }
+        self.refused.push_back(Finished { session, digest, last_sequence: sequence, told_at: at });
+        Outcome::TooLong
     }
 
     fn finished_before(&mut self, session: u64, sequence: u64, digest: Digest) -> Option<&mut Finished> {
@@ -169,6 +219,7 @@ impl Transfer {
             last_sequence: 0,
             last_at: at,
             missing: part.total_bytes.div_ceil(part.part_bytes),
+            told_missing: None,
             held_bytes: 0,
             chunks: BTreeMap::new(),
         }
@@ -178,8 +229,13 @@ impl Transfer {
         (self.digest, self.total_bytes, self.part_bytes) == (part.digest, part.total_bytes, part.part_bytes)
     }
 
-    /// Keeps a part; the decoder has checked that it lies within the plan and has its length. The first of two counts.
-    fn keep(&mut self, part: &PlanPart) {
+    fn parts(&self) -> u32 {
+        self.total_bytes.div_ceil(self.part_bytes)
+    }
+
+    /// Keeps a part; the decoder has checked that it lies within the plan and has its length. The first of two counts;
+    /// true if it was not there yet.
+    fn keep(&mut self, part: &PlanPart) -> bool {
         let (number, within) = (part.part / CHUNK_PARTS, part.part % CHUNK_PARTS);
         let chunk_bytes = u64::from(CHUNK_PARTS) * u64::from(self.part_bytes);
         let length = (u64::from(self.total_bytes) - u64::from(number) * chunk_bytes).min(chunk_bytes);
@@ -193,7 +249,31 @@ impl Transfer {
             let (begin, bytes) = ((within * self.part_bytes) as usize, part.bytes.as_slice());
             chunk.bytes[begin..begin + bytes.len()].copy_from_slice(bytes);
             self.missing -= 1;
+            return true;
         }
+        false
+    }
+
+    /// What is missing, where a planner seems to ask for that: with the last part, or with one that is there already.
+    fn tell_missing(&mut self, part: &PlanPart, is_new: bool, at: TimeNs) -> Option<PlanMissing> {
+        let asks = !is_new || part.part + 1 == self.parts();
+        if !asks || self.told_missing.is_some_and(|told| at.since(told).0 < MISSING_NS) {
+            return None;
+        }
+        self.told_missing = Some(at);
+        let first = (0..self.parts()).find(|part| self.is_missing(*part))?;
+        let mut marks = [0; MARK_BYTES];
+        for mark in 0..(self.parts() - first).min(8 * MARK_BYTES as u32) {
+            marks[(mark / 8) as usize] |= u8::from(self.is_missing(first + mark)) << (mark % 8);
+        }
+        let used = marks.iter().rposition(|byte| *byte != 0).map_or(0, |last| last + 1);
+        let marks = Blob::new(&marks[..used])?;
+        Some(PlanMissing { digest: self.digest, missing: self.missing, first, marks })
+    }
+
+    fn is_missing(&self, part: u32) -> bool {
+        let chunk = self.chunks.get(&(part / CHUNK_PARTS));
+        chunk.is_none_or(|chunk| chunk.have & (1 << (part % CHUNK_PARTS)) == 0)
     }
 
     fn into_bytes(self) -> Vec<u8> {
@@ -262,11 +342,10 @@ mod tests {
         assembler.part(1, 3, &second[1], TimeNs(0));
         assert!(matches!(assembler.part(1, 4, &second[2], TimeNs(0)), Outcome::Whole(_)));
         assembler.part(1, 5, &first[1], TimeNs(0));
-        assert_eq!(
-            assembler.part(1, 6, &first[2], TimeNs(0)),
-            Outcome::Waits,
-            "the first begin was given up"
-        );
+        let Outcome::Missing(missing) = assembler.part(1, 6, &first[2], TimeNs(0)) else {
+            panic!("not whole")
+        };
+        assert_eq!(missing.parts().collect::<Vec<_>>(), [0], "the first begin was given up");
     }
 
     #[test]
@@ -298,6 +377,52 @@ mod tests {
         let mut left: Vec<u64> = assembler.transfers.iter().map(|transfer| transfer.session).collect();
         left.sort_unstable();
         assert_eq!(left, [17, 18, 19, 20]);
+    }
+
+    #[test]
+    fn the_planner_hears_what_is_missing_when_it_asks() {
+        let all = parts(&bytes(20_000, 1), 1);
+        let mut assembler = Assembler::default();
+        let lost = |part: u32| matches!(part, 3 | 70..=140 | 9_000);
+        let mut outcome = Outcome::Waits;
+        for part in all.iter().filter(|part| !lost(part.part)) {
+            outcome = assembler.part(1, u64::from(part.part), part, TimeNs(5));
+            assert!(outcome == Outcome::Waits || part.part == 19_999);
+        }
+        let Outcome::Missing(missing) = outcome else { panic!("{outcome:?}") };
+        assert_eq!((missing.missing, missing.first, missing.digest), (73, 3, all[0].digest));
+        let marked: Vec<u32> = missing.parts().collect();
+        assert_eq!(
+            marked,
+            (0..8_195).filter(|part| lost(*part)).collect::<Vec<_>>(),
+            "as far as the marks go"
+        );
+        for (sequence, part) in marked.iter().enumerate() {
+            let sent = assembler.part(1, sequence as u64, &all[*part as usize], TimeNs(6));
+            assert_eq!(sent, Outcome::Waits);
+        }
+        let again = assembler.part(1, 19_999, &all[19_999], TimeNs(7));
+        assert_eq!(again, Outcome::Waits, "told just now");
+        let Outcome::Missing(missing) = assembler.part(1, 19_999, &all[19_999], TimeNs(6 + MISSING_NS))
+        else {
+            panic!("asked once more")
+        };
+        assert_eq!((missing.missing, missing.parts().collect::<Vec<_>>()), (1, vec![9_000]));
+        assert!(matches!(assembler.part(1, 1, &all[9_000], TimeNs(9)), Outcome::Whole(_)));
+    }
+
+    #[test]
+    fn a_plan_over_the_maximum_is_refused_at_its_first_part_and_told_of_now_and_then() {
+        let mut assembler = Assembler::new(250);
+        let (long, fits) = (parts(&bytes(251, 1), 100), parts(&bytes(250, 1), 100));
+        assert_eq!(assembler.part(1, 1, &long[2], TimeNs(0)), Outcome::TooLong);
+        assert_eq!(assembler.part(1, 2, &long[0], TimeNs(1)), Outcome::Waits);
+        assert_eq!(assembler.part(2, 2, &long[0], TimeNs(1)), Outcome::TooLong, "another session");
+        assert_eq!(assembler.part(1, 3, &long[1], TimeNs(REPETITION_NS)), Outcome::Again);
+        assert!(assembler.transfers.is_empty());
+        assembler.part(1, 4, &fits[0], TimeNs(2));
+        assembler.part(1, 5, &fits[1], TimeNs(2));
+        assert!(matches!(assembler.part(1, 6, &fits[2], TimeNs(2)), Outcome::Whole(_)));
     }
 
     #[test]

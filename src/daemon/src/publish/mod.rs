@@ -71,13 +71,13 @@ struct Asker {
 }
 
 impl Publisher {
-    /// A publisher with a ring of so many bytes.
+    /// A publisher with a ring of so many bytes, and room for a plan of so many.
     pub fn new(
         entries: Consumer<Entry>,
         letters: Receiver<Letter>,
         outlet: Outlet,
         shared: Arc<Shared>,
-        ring_bytes: usize,
+        (ring_bytes, max_plan_bytes): (usize, usize),
         summary: Summary,
     ) -> Self {
         Self {
@@ -85,7 +85,7 @@ impl Publisher {
             letters,
             outlet,
             shared,
-            ring: Ring::new(ring_bytes),
+            ring: Ring::new(ring_bytes, max_plan_bytes),
             summary,
             acks: Acks::default(),
             listeners: Vec::new(),
@@ -180,7 +180,7 @@ impl Publisher {
                     self.send(peer, Message::Ack(*ack));
                 }
             }
-            Letter::PlanBroken { order, digest, text } => {
+            Letter::PlanRefused { order, digest, text } => {
                 self.summary.count_broken_plan();
                 let ack = Ack {
                     order_session: order.session,
@@ -194,6 +194,7 @@ impl Publisher {
                     self.send(peer, Message::Ack(ack));
                 }
             }
+            Letter::Missing(peer, missing) => self.send(peer, Message::PlanMissing(*missing)),
             Letter::Answer(peer, ack) => self.send(peer, Message::Ack(*ack)),
         }
     }

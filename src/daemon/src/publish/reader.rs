@@ -160,7 +160,7 @@ mod tests {
 
     #[test]
     fn whole_frames_long_frames_and_gaps_come_in_order() {
-        let mut ring = Ring::new(usize::MAX);
+        let mut ring = Ring::new(usize::MAX, 0);
         let mut all: Vec<Entry> = (0..50).map(entry).collect();
         all.push(plan(50, 5000));
         all.extend((53..60).map(entry));
@@ -173,7 +173,7 @@ mod tests {
 
     #[test]
     fn what_has_left_the_ring_is_gone_but_for_entry_0() {
-        let mut ring = Ring::new(2000);
+        let mut ring = Ring::new(2000, 0);
         (0..100).for_each(|number| ring.push(&entry(number)));
         let oldest = ring.oldest_unbroken();
         let (entries, gone) = collect(&ring, 0, 99);
@@ -183,7 +183,7 @@ mod tests {
 
     #[test]
     fn datagrams_are_filled() {
-        let mut ring = Ring::new(usize::MAX);
+        let mut ring = Ring::new(usize::MAX, 0);
         (0..100).for_each(|number| ring.push(&entry(number)));
         let Some((Message::JournalPart(part), _)) = next_message(&ring, Place::entry(0), 99) else {
             panic!()
@@ -194,7 +194,7 @@ mod tests {
 
     #[test]
     fn overlapping_ranges_become_one_and_their_number_is_bounded() {
-        let mut ring = Ring::new(usize::MAX);
+        let mut ring = Ring::new(usize::MAX, 0);
         (0..100).for_each(|number| ring.push(&entry(number)));
         let mut ranges = Ranges::default();
         ranges.ask(10, 20);

@@ -1,7 +1,7 @@
 //! The site file: what the machine is, which law drives it, and where the daemon listens.
 //!
-//! TOML. `[vehicle]`, `[law]`, `[node]` and `[pose]` change what the node computes and become [`Settings`]; `[net]` is
-//! the shell's alone. Nothing is clamped or passed over: every mistake is refused, all of them at once, each with file,
+//! TOML. `[vehicle]`, `[law]`, `[node]`, `[pose]` and `[check]` change what the node computes, or which plans it takes,
+//! and become [`Settings`]; `[net]` is the shell's alone. Nothing is clamped or passed over: every mistake is refused, all of them at once, each with file,
 //! line, key, value, bound and unit.
 
 pub mod net;

@@ -1,7 +1,8 @@
-//! `[net]`: where the daemon listens, how much journal it keeps, and which real-time privileges it asks for.
+//! `[net]`: where the daemon listens, how much journal it keeps, how long a plan may be, and which real-time privileges it asks for.
 
 use std::net::{Ipv4Addr, SocketAddr};
 use trackhold_core::keys::{Absent, Bound, Key, Problem, Values};
+use trackhold_proto::journal::MAX_PLAN_BYTES;
 
 /// The address listened on by default.
 pub const DEFAULT_LISTEN: SocketAddr = SocketAddr::new(std::net::IpAddr::V4(Ipv4Addr::LOCALHOST), 4710);
@@ -19,7 +20,14 @@ pub const KEYS: &[Key] = &[
         "bytes",
         (64 << 20) as f64,
         Bound::within((1 << 20) as f64, (4_u64 << 30) as f64),
-        "journal kept for recorders that fell behind; older entries can no longer be asked for",
+        "journal kept for recorders that fell behind, beside the longest plan; older entries can no longer be asked for",
+    ),
+    Key::with_default(
+        "max_plan_bytes",
+        "bytes",
+        MAX_PLAN_BYTES as f64,
+        Bound::within(1024.0, MAX_PLAN_BYTES as f64),
+        "a longer plan is refused before it is taken in; up to three times as much memory is in use while one is",
     ),
     Key::optional(
         "realtime_priority",
@@ -37,6 +45,8 @@ pub struct Net {
     pub listen: SocketAddr,
     /// How much journal it keeps, bytes.
     pub ring_bytes: usize,
+    /// The longest plan taken in, bytes.
+    pub max_plan_bytes: usize,
     /// SCHED_FIFO priority to ask for.
     pub realtime_priority: Option<i32>,
     /// Processor to keep the control loop on.
@@ -47,13 +57,14 @@ pub struct Net {
 
 impl Default for Net {
     fn default() -> Self {
-        let ring_bytes = KEYS.iter().find_map(|key| match key.absent {
-            Absent::Default(value) if key.name == "ring_bytes" => Some(value as usize),
-            _ => None,
-        });
+        let default = |name: &str| match KEYS.iter().find(|key| key.name == name).map(|key| key.absent) {
+            Some(Absent::Default(value)) => value as usize,
+            _ => unreachable!("key {name} has a default"),
+        };
         Self {
             listen: DEFAULT_LISTEN,
-            ring_bytes: ring_bytes.unwrap_or(64 << 20),
+            ring_bytes: default("ring_bytes"),
+            max_plan_bytes: default("max_plan_bytes"),
             realtime_priority: None,
             cpu: None,
             lock_memory: false,
@@ -69,6 +80,7 @@ impl Net {
     pub(super) fn set_numbers(&mut self, given: &Values) -> Result<(), Vec<Problem>> {
         let values = given.checked(KEYS)?;
         self.ring_bytes = values.get("ring_bytes") as usize;
+        self.max_plan_bytes = values.get("max_plan_bytes") as usize;
         self.realtime_priority = values.find("realtime_priority").map(|priority| priority as i32);
         self.cpu = values.find("cpu").map(|cpu| cpu as usize);
         Ok(())

@@ -9,11 +9,12 @@ use toml::Spanned;
 use toml::de::{DeInteger, DeTable, DeValue};
 use trackhold_core::keys::{Key, Problem, Values, names};
 use trackhold_core::node::params;
+use trackhold_core::plan::check;
 use trackhold_core::settings::{LawSettings, POSE_KEYS, Settings, VehicleSettings};
 use trackhold_core::{law, vehicle};
 
 /// The sections of a site file.
-const SECTIONS: [&str; 5] = ["vehicle", "law", "node", "pose", "net"];
+const SECTIONS: [&str; 6] = ["vehicle", "law", "node", "pose", "check", "net"];
 
 /// Reads a site file's text.
 pub(super) fn read(text: &str) -> Result<Site, Vec<Placed>> {
@@ -86,8 +87,9 @@ impl<'t> Reader<'t> {
         let law = self.law(section("law"));
         let node = self.numbers("node", section("node"), Some(params::KEYS), &[]);
         let pose = self.numbers("pose", section("pose"), Some(POSE_KEYS), &[]);
+        let check = self.numbers("check", section("check"), Some(check::KEYS), &[]);
         let net = self.net(section("net"));
-        (Settings { vehicle, law, node, pose }, net)
+        (Settings { vehicle, law, node, pose, check }, net)
     }
 
     fn vehicle(&mut self, table: Option<&DeTable<'_>>) -> VehicleSettings {

@@ -34,11 +34,12 @@ fn vehicle_and_law_are_enough_and_whole_numbers_are_numbers() {
 
 #[test]
 fn every_net_key_is_read() {
-    let net = "[net]\nlisten = \"[::1]:0\"\nring_bytes = 0x200000\nrealtime_priority = 80\ncpu = 1\nlock_memory = true\n";
+    let net = "[net]\nlisten = \"[::1]:0\"\nring_bytes = 0x200000\nmax_plan_bytes = 50000\nrealtime_priority = 80\ncpu = 1\nlock_memory = true\n";
     let site = Site::parse(&format!("{GOOD}\n{net}"), "site.toml").unwrap();
     let expected = Net {
         listen: "[::1]:0".parse().unwrap(),
         ring_bytes: 2 << 20,
+        max_plan_bytes: 50_000,
         realtime_priority: Some(80),
         cpu: Some(1),
         lock_memory: true,
@@ -62,13 +63,18 @@ fn a_value_outside_its_bound_is_named_with_line_key_value_bound_and_unit() {
         "site.toml:13: net.realtime_priority: 99 is not at least 1 and at most 98"
     );
     assert!(refused_with("[law.gains]\nk_x = -1").starts_with("site.toml:13: law.gains.k_x: -1"));
+    let said = refused(&GOOD.replace("wheel_radius_m", "left_wheel_radius_m"));
+    assert!(
+        said.contains("vehicle.right_wheel_radius_m: missing; left_wheel_radius_m is given, give both"),
+        "{said}"
+    );
 }
 
 #[test]
 fn unknown_keys_and_sections_are_refused_with_those_known() {
     let text = GOOD.replace("track_width_m", "track_with_m");
     let said = refused(&text);
-    let known = "kind, wheel_radius_m, track_width_m, max_wheel_speed_rad_s, max_wheel_accel_rad_s2";
+    let known = "kind, wheel_radius_m, left_wheel_radius_m, right_wheel_radius_m, track_width_m,";
     assert!(
         said.contains(&format!("site.toml:5: vehicle.track_with_m: no such key here; known are {known}")),
         "{said}"
@@ -79,7 +85,7 @@ fn unknown_keys_and_sections_are_refused_with_those_known() {
     );
     assert_eq!(
         refused_with("[radio]\nchannel = 1"),
-        "site.toml:12: radio: no such section; known are vehicle, law, node, pose, net"
+        "site.toml:12: radio: no such section; known are vehicle, law, node, pose, check, net"
     );
     assert!(
         refused(&format!("rate_hz = 50\n{GOOD}"))
@@ -87,7 +93,7 @@ fn unknown_keys_and_sections_are_refused_with_those_known() {
     );
     assert_eq!(
         refused_with("[net]\nport = 4710"),
-        "site.toml:13: net.port: no such key here; known are listen, lock_memory, ring_bytes, realtime_priority, cpu"
+        "site.toml:13: net.port: no such key here; known are listen, lock_memory, ring_bytes, max_plan_bytes, realtime_priority, cpu"
     );
 }
 
@@ -117,7 +123,7 @@ fn wrong_types_are_refused_with_what_is_wanted() {
 fn missing_and_unknown_names_are_refused_with_those_known() {
     let said = refused("[law]\nname = \"pure\"\n");
     assert!(
-        said.contains("site.toml:1: vehicle.kind: missing; give one of unicycle, differential, car"),
+        said.contains("site.toml:1: vehicle.kind: missing; give one of unicycle, differential, skid-steer,"),
         "{said}"
     );
     assert!(

@@ -158,15 +158,14 @@ impl Collector {
 
     fn take_piece(&mut self, part: &JournalPart, now: Instant) {
         let number = part.first;
+        // It is on its way; asking again now would send all of it twice. What was asked for with it comes behind it, which
+        // after a long plan takes seconds: that is no reason to give anything up.
+        self.asked.values_mut().for_each(|asked| asked.at = now);
         if number < self.expected || self.held.contains_key(&number) {
             self.tally.duplicates += 1;
             return;
         }
         self.reach(number + 1);
-        if let Some(asked) = self.asked.get_mut(&number) {
-            // It is on its way; asking again now would send all of it twice.
-            asked.at = now;
-        }
         let Some(frame) = self.assemblies.take(part) else { return };
         match intact_frame(&frame, number) {
             Some(length) if length == frame.len() => self.insert(number, frame),

@@ -110,7 +110,7 @@ impl Scenario {
         let checked = site.checked()?;
         let robot = RobotSpec::parse(ROBOT, "demo/robot.toml")?;
         let raw = if short { SHORT_PLAN } else { PLAN };
-        let plan = plan::compile(raw.as_bytes(), &*checked.vehicle)
+        let plan = plan::check::admit(raw.as_bytes(), &checked.terms())
             .map_err(|findings| anyhow::anyhow!("the demo's plan: {}", findings.join("; ")))?;
         let file: Value = serde_json::from_str(raw)?;
         let kinds = file["segments"].as_array().into_iter().flatten().map(Stretch::of);

@@ -13,6 +13,7 @@ use trackhold_core::geometry::Pose;
 use trackhold_core::plan::{self, Plan};
 use trackhold_core::settings::Settings;
 use trackhold_core::time::SpanNs;
+use trackhold_proto::blob::Digest;
 use trackhold_proto::journal::{Body, Boot, Entry, PlanEvent, TickRecord, flag};
 use trackhold_proto::words::Mode;
 
@@ -53,9 +54,10 @@ struct Logged {
     asked: Asked,
     begin_ns: u64,
     csv: Option<CsvFile>,
-    /// The plan that arrived last, and the one that was loaded.
+    /// The plan that arrived last, the one in force, and those that wait for their plan time, in its order.
     arrived: Option<PlanEvent>,
     plan: Option<Plan>,
+    waiting: Vec<Plan>,
     cursor: usize,
     /// Tick before this one: its moment and the rate of the plan's time.
     before: Option<(u64, f64)>,
@@ -96,6 +98,7 @@ impl Logged {
             csv,
             arrived: None,
             plan: None,
+            waiting: Vec::new(),
             cursor: 0,
             before: None,
             following: false,
@@ -111,18 +114,19 @@ impl Logged {
     fn take(&mut self, entry: Entry) -> anyhow::Result<()> {
         match entry.body {
             Body::Plan(event) => self.arrived = Some(event),
+            Body::PlanWaits(waits) => {
+                let plan = self.arrived(waits.digest, entry.number)?;
+                self.waiting.retain(|waiting| waiting.begin() < plan.begin());
+                self.waiting.push(plan);
+            }
+            // The tick before took over already.
+            Body::PlanLoaded(loaded) if self.is_in_force(loaded.digest) => {}
             Body::PlanLoaded(loaded) => {
-                let Some(event) = self.arrived.take().filter(|event| event.digest == loaded.digest) else {
-                    bail!("entry {}: a plan was loaded that the log does not hold", entry.number);
-                };
-                let compiled = plan::compile(&event.raw, &**self.asked.vehicle());
-                self.plan = Some(compiled.map_err(|findings| {
-                    anyhow!(
-                        "entry {}: its plan does not compile here:\n  {}",
-                        entry.number,
-                        findings.join("\n  ")
-                    )
-                })?);
+                self.plan = Some(self.arrived(loaded.digest, entry.number)?);
+                self.waiting.clear();
+            }
+            Body::ModeChange(change) if !matches!(change.to, Mode::Tracking | Mode::ControlledStop) => {
+                self.waiting.clear();
             }
             Body::Tick(record) => self.tick(&record),
             Body::Gap(gap) => bail!("entries {} to {} are missing", gap.first, gap.last),
@@ -131,7 +135,30 @@ impl Logged {
         Ok(())
     }
 
+    fn is_in_force(&self, digest: Digest) -> bool {
+        self.plan.as_ref().is_some_and(|plan| plan.digest() == digest)
+    }
+
+    /// The plan that arrived last, compiled.
+    fn arrived(&mut self, digest: Digest, number: u64) -> anyhow::Result<Plan> {
+        let Some(event) = self.arrived.take().filter(|event| event.digest == digest) else {
+            bail!("entry {number}: a plan was taken that the log does not hold");
+        };
+        plan::compile(&event.raw, &**self.asked.vehicle()).map_err(|findings| {
+            anyhow!("entry {number}: its plan does not compile here:\n  {}", findings.join("\n  "))
+        })
+    }
+
+    /// Goes over to the plan whose plan time was reached, as the node does.
+    fn take_over(&mut self, reached: SpanNs) {
+        let due = self.waiting.partition_point(|waiting| waiting.begin() <= reached);
+        if let Some(next) = self.waiting.drain(..due).next_back() {
+            (self.plan, self.cursor) = (Some(next), 0);
+        }
+    }
+
     fn tick(&mut self, record: &TickRecord) {
+        self.take_over(SpanNs(record.plan_time_ns));
         let period_s = self.asked.period_s();
         let (at_before, rate_before) = self.before.replace((record.at_ns, record.plan_rate)).unzip();
         let elapsed = at_before.map(|at| SpanNs(record.at_ns.saturating_sub(at)));
@@ -144,7 +171,8 @@ impl Logged {
             self.asked.rest();
             return;
         };
-        let mut reference = plan.at(SpanNs(record.plan_time_ns).seconds(), &mut self.cursor);
+        let place = SpanNs(record.plan_time_ns) - plan.begin();
+        let mut reference = plan.at(place.seconds(), &mut self.cursor);
         if record.plan_rate != 1.0 {
             let change = rate_before.map_or(0.0, |before| (record.plan_rate - before) / seconds.max(1e-9));
             reference = reference.slowed(record.plan_rate, change);

@@ -38,6 +38,38 @@ fn a_plan_arrives_whole_over_a_link_that_loses_a_fifth() {
 }
 
 #[test]
+fn only_what_the_daemon_misses_is_sent_again() {
+    let (mut seen, mut asked) = (BTreeMap::<u32, u32>::new(), 0);
+    let daemon = fake::daemon(move |envelope| {
+        let Some(envelope @ Envelope { message: Message::PlanPart(part), .. }) = envelope else {
+            return Vec::new();
+        };
+        *seen.entry(part.part).or_default() += 1;
+        // Parts 7 and 200 are lost on the first way.
+        if part.part != 292 {
+            return Vec::new();
+        }
+        asked += 1;
+        if asked > 1 {
+            let twice: Vec<u32> =
+                seen.iter().filter(|(_, times)| **times > 1).map(|(part, _)| *part).collect();
+            return vec![ack_of(envelope, if twice == [7, 200, 292] { "" } else { "sent too much" })];
+        }
+        let mut marks = [0; 25];
+        (marks[0], marks[24]) = (1, 2);
+        let marks = trackhold_proto::blob::Blob::new(&marks).unwrap();
+        vec![Message::PlanMissing(trackhold_proto::message::PlanMissing {
+            digest: part.digest,
+            missing: 2,
+            first: 7,
+            marks,
+        })]
+    });
+    let answer = send_plan(&mut client(&daemon), &vec![b'x'; 300_000]).unwrap();
+    assert!(answer.accepted() && answer.sent == 2, "{:?}", answer.ack.text);
+}
+
+#[test]
 fn a_refused_plan_brings_its_reasons() {
     let daemon = planner_side();
     let answer = send_plan(&mut client(&daemon), b"an unfit plan").unwrap();

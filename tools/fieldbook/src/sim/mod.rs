@@ -189,7 +189,7 @@ impl<O: Observer> Sink for Tap<'_, O> {
 }
 
 fn load<O: Observer>(node: &mut Node, raw: &[u8], tap: &mut Tap<'_, O>) -> Result<(), SimError> {
-    let compiled = plan::compile(raw, &**node.vehicle()).map(Box::new);
+    let compiled = plan::check::admit(raw, node.terms()).map(Box::new);
     let event =
         PlanEvent { session: PLANNER_SESSION, sequence: 1, digest: digest::of_bytes(raw), raw: raw.to_vec() };
     node.handle(TimeNs(0), Event::Plan(event, compiled), tap);

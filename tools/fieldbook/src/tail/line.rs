@@ -40,6 +40,14 @@ pub(super) fn of(body: &Body) -> String {
             plan.duration_ns as f64 / 1e9,
             if plan.open { ", open" } else { "" }
         ),
+        Body::PlanWaits(waits) => format!(
+            "-- plan revision {} goes on at plan time {:.3} s, step {:.4} m, curvature {:+.4} 1/m; {} waiting",
+            waits.revision,
+            waits.at_ns as f64 / 1e9,
+            waits.position_step_m,
+            waits.curvature_step_1_m,
+            waits.waiting
+        ),
         Body::Gap(gap) => format!("-- entries {} to {} could not be had", gap.first, gap.last),
         Body::End(end) => format!("-- end, {} entries", end.entries),
     }

@@ -2,6 +2,7 @@
 
 mod common;
 mod replay;
+mod retime;
 mod robot;
 mod simulate;
 mod zoh;

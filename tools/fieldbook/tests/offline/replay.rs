@@ -58,6 +58,20 @@ fn every_simulated_log_replays_identical() {
 }
 
 #[test]
+fn a_log_from_before_the_section_check_replays_identical() {
+    let mut all = entries(&small_log("younger.tracklog"));
+    let Body::Boot(boot) = &mut all[0].body else { panic!("entry 0 is the boot") };
+    let mut settings: serde_json::Value = serde_json::from_str(&boot.settings).unwrap();
+    assert!(settings.as_object_mut().unwrap().remove("check").is_some());
+    boot.settings = settings.to_string();
+    assert!(is_identical(&written("older.tracklog", &all), false));
+    // A key that the node would not know is another matter.
+    let Body::Boot(boot) = &mut all[0].body else { panic!("entry 0 is the boot") };
+    boot.settings = boot.settings.replace("\"pose\"", "\"posture\"");
+    assert!(!is_identical(&written("strange.tracklog", &all), false));
+}
+
+#[test]
 fn no_altered_byte_passes() {
     let good = small_log("altered.tracklog");
     assert!(is_identical(&good, false));

@@ -113,6 +113,22 @@ fn a_long_entry_is_joined_from_parts_in_any_order_over_two_answers() {
 }
 
 #[test]
+fn what_comes_behind_a_long_entry_is_waited_for_as_long_as_that_takes() {
+    let begun = Instant::now();
+    let mut collector = Collector::new(0, 3, 4);
+    assert_eq!(collector.requests(begun)[0], JournalRequest { first: 0, last: 2 });
+    let bytes = Blob::new(&[0; JOURNAL_BYTES]).unwrap();
+    for part in 0..1000 {
+        let now = begun + Duration::from_millis(10) * part;
+        collector.take_part(&JournalPart { first: 0, entries: 1, part, parts: 10_000, bytes }, now);
+        assert_eq!(collector.requests(now), []);
+    }
+    assert_eq!(collector.next_item(), None);
+    let again = collector.requests(begun + Duration::from_millis(10_200));
+    assert_eq!(again[0], JournalRequest { first: 0, last: 2 }, "once it has become silent");
+}
+
+#[test]
 fn damage_and_nonsense_are_counted_and_change_nothing() {
     let now = Instant::now();
     let mut collector = Collector::new(0, 0, 20);
