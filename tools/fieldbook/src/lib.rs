@@ -10,6 +10,7 @@
 //! | [`stats`] | tracking errors of a run in numbers |
 //! | [`replay`] | a recorded run once more, compared bit for bit |
 //! | [`open_loop`], [`poses`] | what a law would have commanded at given poses |
+//! | [`import`] | a path from another program's file into a plan |
 //! | [`client`] | the UDP client towards a daemon |
 //! | [`status`], [`orders`] | what a daemon is doing; plan, start, stop, reset |
 //! | [`pack`] | a plan of samples in its compact form |
@@ -22,6 +23,7 @@ pub mod choice;
 pub mod cli;
 pub mod client;
 pub mod demo;
+pub mod import;
 pub mod log;
 pub mod open_loop;
 pub mod orders;
