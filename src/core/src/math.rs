@@ -31,6 +31,16 @@ pub fn sqrt(value: f64) -> f64 {
     libm::sqrt(value)
 }
 
+/// Cube root.
+pub fn cbrt(value: f64) -> f64 {
+    libm::cbrt(value)
+}
+
+/// The least whole number that is not below `value`.
+pub fn ceil(value: f64) -> f64 {
+    libm::ceil(value)
+}
+
 /// The exponential function.
 pub fn exp(value: f64) -> f64 {
     libm::exp(value)

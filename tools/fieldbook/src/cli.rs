@@ -1,6 +1,6 @@
 //! The command line: one line a subcommand; each one's arguments and work are in its own file.
 
-use crate::{check, demo, import, orders, pack, record, replay, simulate, status, tail};
+use crate::{check, demo, import, orders, pack, record, replay, retime, simulate, status, tail};
 use clap::{Parser, Subcommand};
 use std::process::ExitCode;
 
@@ -27,6 +27,8 @@ pub enum Command {
     Simulate(simulate::Args),
     /// A recorded run once more, compared bit for bit; or what a law would have commanded at recorded poses.
     Replay(replay::Args),
+    /// The fastest timing of a plan within the limits, with a reserve for feedback.
+    Retime(retime::Args),
     /// A path from another program's file into a plan.
     Import(import::Args),
     /// Daemon, stand-in robot and recorder in one command, on an invented site.
@@ -59,6 +61,7 @@ impl Command {
             Self::Check(args) => check::run(&args),
             Self::Simulate(args) => simulate::run(&args),
             Self::Replay(args) => replay::run(&args),
+            Self::Retime(args) => retime::run(&args),
             Self::Import(args) => import::run(&args),
             Self::Demo(args) => demo::run(&args),
             Self::Status(args) => status::run(&args),

@@ -6,6 +6,7 @@
 //! | [`log`] | track logs, written and read |
 //! | [`choice`] | `--law` and `--gain`: which law follows |
 //! | [`check`] | whether a machine can follow a plan |
+//! | [`retime`] | the fastest timing of a plan within the limits |
 //! | [`simulate`], [`sim`] | closed loop in the core: the command and the loop itself |
 //! | [`stats`] | tracking errors of a run in numbers |
 //! | [`replay`] | a recorded run once more, compared bit for bit |
@@ -32,6 +33,7 @@ pub mod pack;
 pub mod poses;
 pub mod record;
 pub mod replay;
+pub mod retime;
 pub mod sim;
 pub mod simulate;
 pub mod stats;

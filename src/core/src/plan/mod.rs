@@ -18,6 +18,7 @@ mod path;
 mod pivot;
 mod points;
 mod profile;
+pub mod retime;
 mod samples;
 pub mod segment;
 mod spans;
