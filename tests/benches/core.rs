@@ -178,10 +178,29 @@ fn samples_json(count: usize) -> String {
     )
 }
 
-/// A plan of ten arcs on the same circle.
-fn ten_segments() -> String {
+/// Plans of ten segments of one kind, about as long.
+fn ten_segments() -> [(&'static str, String); 3] {
+    let plan = |segments: String| {
+        BENDS.replace(r#"{"kind":"arc","radius_m":50,"turn_rad":900,"speed_m_s":1}"#, &segments)
+    };
     let arc = r#"{"kind":"arc","radius_m":50,"turn_rad":40,"speed_m_s":1}"#;
-    BENDS.replace(r#"{"kind":"arc","radius_m":50,"turn_rad":900,"speed_m_s":1}"#, &[arc; 10].join(","))
+    let clothoid = r#"{"kind":"clothoid","curvature_start_1_m":0.01,"curvature_end_1_m":0.03,"length_m":2000,"speed_m_s":1}"#;
+    let samples = |begin: usize| {
+        let points: Vec<String> = (0..=2000)
+            .map(|index| {
+                let (t_s, turn) = (index as f64, (begin + index) as f64 / 50.0);
+                let (x_m, y_m) = (50.0 * turn.sin(), 50.0 - 50.0 * turn.cos());
+                format!(r#"{{"t_s":{t_s},"x_m":{x_m},"y_m":{y_m},"heading_rad":{turn}}}"#)
+            })
+            .collect();
+        format!(r#"{{"kind":"samples","points":[{}]}}"#, points.join(","))
+    };
+    let samples: Vec<String> = (0..10).map(|segment| samples(2000 * segment)).collect();
+    [
+        ("ten arcs", plan([arc; 10].join(","))),
+        ("ten clothoids", plan([clothoid; 10].join(","))),
+        ("ten segments of samples", plan(samples.join(","))),
+    ]
 }
 
 /// What a long plan costs when it comes, and when it is followed.
@@ -210,7 +229,8 @@ fn long_plans(criterion: &mut Criterion) {
 
     let mut group = criterion.benchmark_group("pose and tick with a plan of");
     group.throughput(Throughput::Elements(1));
-    for (name, raw) in [("ten segments", ten_segments().into_bytes()), ("1,000,000 samples", compact)] {
+    let plans = ten_segments().map(|(name, json)| (name, json.into_bytes()));
+    for (name, raw) in plans.into_iter().chain([("1,000,000 samples", compact)]) {
         let (mut node, mut last, mut tick) = tracking("kanayama", &raw);
         group.bench_function(name, |bencher| {
             bencher.iter(|| {
