@@ -12,8 +12,8 @@ pub(super) const POINTS: usize = 5;
 const MIN_CELLS: f64 = 24.0;
 /// Most cells of a run; beyond, the step grows.
 const MAX_CELLS: f64 = 200_000.0;
-/// The bound on the squared speed may sag by this part of itself in the middle of a cell, a sixteenth of that between two
-/// of its points; else the cell is halved, up to so many times.
+/// In the middle of a cell bounds may leave the line between its ends by this part of themselves, a sixteenth of that
+/// between two of its points; else the cell is halved, up to so many times.
 const SAG: f64 = 1.6e-3;
 const MOST_HALVINGS: u32 = 8;
 /// Part of the limits used where the curvature varies, so that joining cells into few pieces has room.
@@ -270,35 +270,68 @@ fn cell(path: &dyn Path, piece: usize, begin: f64, (from, to): (f64, f64), share
     }
 }
 
-/// Where a piece is cut, its ends included: lines and arcs nowhere; else evenly, and finer where the bound on the squared
-/// speed bends: a straight line between two points of it would lie above it.
+/// Where a piece is cut, its ends included: lines and arcs nowhere; else evenly, and finer where the bounds bend between
+/// the points at which they are looked at.
 fn even_cuts(path: &dyn Path, step: f64, limits: &dyn Limits, share: f64) -> Vec<f64> {
     let length = path.length_m();
     if path.is_uniform() {
         return vec![0.0, length];
     }
-    let bound = |at: f64| {
-        let speed = limits.speed_bound_m_s(path.bend(at), share);
-        speed * speed
-    };
+    let look = |at: f64| Look::at(path, limits, share, at);
     let even = even(0.0, length, step.min(length / MIN_CELLS));
     let mut cuts = vec![0.0];
     for pair in even.windows(2) {
-        refine(&bound, (pair[0], bound(pair[0])), (pair[1], bound(pair[1])), MOST_HALVINGS, &mut cuts);
+        refine(&look, (pair[0], pair[1]), MOST_HALVINGS, &mut cuts);
     }
     cuts
 }
 
-/// Halves a cell until the bound sags by no more than [`SAG`], and adds its ends but for the first.
-fn refine(bound: &dyn Fn(f64) -> f64, from: (f64, f64), to: (f64, f64), halvings: u32, cuts: &mut Vec<f64>) {
-    let at = 0.5 * (from.0 + to.0);
-    let middle = (at, bound(at));
-    let sag = 0.5 * (from.1 + to.1) - middle.1;
-    if halvings > 0 && sag > SAG * middle.1 {
-        refine(bound, from, middle, halvings - 1, cuts);
-        refine(bound, middle, to, halvings - 1, cuts);
+/// What the grid's fineness hangs on at a place.
+struct Look<'a> {
+    limits: &'a dyn Limits,
+    share: f64,
+    bend: Bend,
+    /// Greatest squared speed.
+    square: f64,
+}
+
+impl<'a> Look<'a> {
+    fn at(path: &dyn Path, limits: &'a dyn Limits, share: f64, at: f64) -> Self {
+        let bend = path.bend(at);
+        Self { limits, share, bend, square: greatest_square(limits, bend, share).unwrap_or(f64::INFINITY) }
+    }
+
+    fn accels(&self, square: f64) -> (f64, f64) {
+        self.limits.accel_bounds_m_s2(math::sqrt(square), self.bend, self.share)
+    }
+
+    /// True if what lies between two places is all but a line: the bound on the squared speed does not sag in the middle
+    /// below the line, nor do those on the acceleration leave it.
+    fn is_even(from: &Self, middle: &Self, to: &Self) -> bool {
+        if 0.5 * (from.square + to.square) - middle.square > SAG * middle.square {
+            return false;
+        }
+        let square = middle.square.min(from.square).min(to.square);
+        if !square.is_finite() {
+            return true;
+        }
+        let (before, here, after) = (from.accels(square), middle.accels(square), to.accels(square));
+        let scale = middle.accels(0.0);
+        let leaves = |one: f64, between: f64, other: f64| {
+            (0.5 * (one + other) - between).abs() > SAG * scale.1.min(-scale.0)
+        };
+        !leaves(before.0, here.0, after.0) && !leaves(before.1, here.1, after.1)
+    }
+}
+
+/// Halves a cell until what lies on it is even, and adds its ends but for the first.
+fn refine<'a>(look: &dyn Fn(f64) -> Look<'a>, (from, to): (f64, f64), halvings: u32, cuts: &mut Vec<f64>) {
+    let middle = 0.5 * (from + to);
+    if halvings > 0 && !Look::is_even(&look(from), &look(middle), &look(to)) {
+        refine(look, (from, middle), halvings - 1, cuts);
+        refine(look, (middle, to), halvings - 1, cuts);
     } else {
-        cuts.push(to.0);
+        cuts.push(to);
     }
 }
 
