@@ -7,6 +7,8 @@ use trackhold_core::vehicle::{LimitName, Vehicle};
 
 /// From this part of what the reserve leaves on, a limit counts as used up.
 const USED_UP: f64 = 0.98;
+/// The same of the jerk: what keeps it leaves some of it.
+const JERK_USED_UP: f64 = 0.85;
 /// Looks a second, and most looks at a plan.
 const LOOKS_PER_S: f64 = 200.0;
 const MOST_LOOKS: f64 = 1_000_000.0;
@@ -60,7 +62,7 @@ impl Bounds {
                 Some((_, count)) => *count += 1,
                 None => self.counts.push((greatest.limit, 1)),
             }
-        } else if vehicle.max_jerk_m_s3().is_some_and(|limit| jerk(placed, t_s) >= USED_UP * limit) {
+        } else if vehicle.max_jerk_m_s3().is_some_and(|limit| jerk(placed, t_s) >= JERK_USED_UP * limit) {
             self.jerk += 1;
         }
     }

@@ -143,7 +143,9 @@ pub(super) fn join(
 pub(super) fn with_joints(points: Vec<TimingPoint>, joints: &[f64], shortest_s: f64) -> Vec<TimingPoint> {
     let mut whole: Vec<TimingPoint> = Vec::with_capacity(points.len() + joints.len());
     let mut next = joints.iter().copied().peekable();
+    let end_s = points[points.len() - 1].t_s;
     for point in points {
+        let mut near = false;
         while let Some(joint) = next.peek().copied().filter(|joint| *joint < point.s_m) {
             next.next();
             let from = whole[whole.len() - 1];
@@ -151,9 +153,12 @@ pub(super) fn with_joints(points: Vec<TimingPoint>, joints: &[f64], shortest_s: 
             if crossing.t_s - from.t_s < shortest_s && whole.len() > 1 && !joints.contains(&from.s_m) {
                 whole.pop();
             }
+            near = point.t_s - crossing.t_s < shortest_s;
             whole.push(crossing);
         }
-        whole.push(point);
+        if !near || point.t_s == end_s {
+            whole.push(point);
+        }
     }
     whole
 }

@@ -18,7 +18,7 @@ use alloc::vec::Vec;
 const AVERAGE_PART: f64 = 0.01;
 const LONGEST_AVERAGE_S: f64 = 0.05;
 /// Cells in the averaging time.
-const CELLS: f64 = 16.0;
+const CELLS: f64 = 10.0;
 const COARSE_CELLS: f64 = 5.0;
 /// About the least number of cells: a cell is no longer than eight parts of so many.
 const LEAST_CELLS: f64 = 128.0;
@@ -35,11 +35,15 @@ const BACKWARDS_M_S: f64 = 1e-9;
 /// Where pieces are joined the acceleration may step by this part of what the jerk allows in a tenth of a second.
 const JOIN_PART: f64 = 0.02;
 
-/// The fastest timing within a jerk limit.
-pub(super) fn solve(run: &Run<'_>, limits: &dyn Limits, jerk: f64) -> Result<Vec<TimingPoint>, Unsolvable> {
-    let mut coarse = Grid::new(run, limits, &Cutting::Even);
-    let fast = super::solve(run, limits, &mut coarse)?;
-    let scale = Scale::of(&fast, run, coarse.length_m(), jerk);
+/// The fastest timing within a jerk limit, from the one without (`fast`).
+pub(super) fn solve(
+    run: &Run<'_>,
+    limits: &dyn Limits,
+    jerk: f64,
+    fast: &[knots::Knot],
+    length_m: f64,
+) -> Result<Vec<TimingPoint>, Unsolvable> {
+    let scale = Scale::of(fast, run, length_m, jerk);
     // Cells of even time need the speeds to come: found roughly, they cut the grid for the second time.
     let (scale, cuts) = scale.cut();
     let mut rough = looking_around(run, limits, &scale, cuts)?;

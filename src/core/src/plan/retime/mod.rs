@@ -14,7 +14,7 @@
 //! | `grid` | cuts the path into cells, keeps the curvature at five points of each |
 //! | `passes` | the two passes |
 //! | `knots` | from the grid to pieces of constant acceleration, few of them |
-//! | `jerk`, `barrier`, `average` | under a jerk limit: its grid, its optimum there, and what makes that smooth |
+//! | `blocks`, `jerk`, `barrier`, `average` | under a jerk limit: long runs cut up; the grid, its optimum there, and what makes that smooth |
 //! | `verify` | dense sampling: nothing leaves here that goes beyond a limit |
 //! | `runs` | a whole plan: where it rests, what is driven in one go, the vehicle's limits |
 //!
@@ -23,6 +23,7 @@
 
 mod average;
 mod barrier;
+mod blocks;
 mod grid;
 mod jerk;
 mod knots;
@@ -186,14 +187,12 @@ pub struct Run<'a> {
 /// # Errors
 /// Why there is none.
 pub fn fastest(run: &Run<'_>, limits: &dyn Limits) -> Result<Vec<Vec<TimingPoint>>, Unsolvable> {
-    let profile = match limits.jerk_m_s3() {
-        None => {
-            let mut grid = Grid::new(run, limits, &Cutting::Even);
-            solve(run, limits, &mut grid)?.iter().map(Knot::timed).collect()
-        }
-        Some(jerk_m_s3) => jerk::solve(run, limits, jerk_m_s3)?,
-    };
-    Ok(knots::by_piece(run, &profile))
+    if let Some(jerk_m_s3) = limits.jerk_m_s3() {
+        return blocks::solve(run, limits, jerk_m_s3);
+    }
+    let mut grid = Grid::new(run, limits, &Cutting::Even);
+    let points: Vec<TimingPoint> = solve(run, limits, &mut grid)?.iter().map(Knot::timed).collect();
+    Ok(knots::by_piece(run, &points))
 }
 
 /// Passes, pieces of constant acceleration and their check, until the check finds nothing.

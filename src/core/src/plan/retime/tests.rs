@@ -300,6 +300,28 @@ proptest! {
 }
 
 #[test]
+fn a_long_run_is_solved_in_blocks_that_join_at_speed() {
+    // 160 m, 12 bends: more than two blocks of 45 s.
+    let (rough, smooth) = (
+        unicycle(&[("max_lateral_accel_m_s2", 0.2)]),
+        unicycle(&[("max_lateral_accel_m_s2", 0.2), ("max_jerk_m_s3", 0.5)]),
+    );
+    let bend = |sign: f64| {
+        [
+            straight(11.0),
+            Ramp { from_1_m: 0.0, to_1_m: sign, length_m: 1.2 },
+            Ramp { from_1_m: sign, to_1_m: 0.0, length_m: 1.2 },
+        ]
+    };
+    let path: Vec<Ramp> = (0..12).flat_map(|index| bend(if index % 2 == 0 { 1.0 } else { -1.0 })).collect();
+    let fast = duration(&retimed(&path, &rough, (0.0, 0.0), 0.8).unwrap());
+    let timing = retimed(&path, &smooth, (0.0, 0.0), 0.8).unwrap();
+    let (jerk, step) = assert_within(&path, &smooth, (0.0, 0.0), 0.8, &timing);
+    assert!(jerk <= 0.5 * (1.0 + 1e-6) && step < 0.005, "{jerk} {step}");
+    assert!(fast > 180.0 && duration(&timing) < 1.1 * fast, "{} against {fast}", duration(&timing));
+}
+
+#[test]
 fn errors_say_what_to_do() {
     let text: String = alloc::format!("{}", Unsolvable::StartSpeed { greatest_m_s: 0.5 });
     assert!(text.contains("0.5000 m/s") && text.contains("lower --start-speed"), "{text}");
