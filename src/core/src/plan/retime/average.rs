@@ -4,6 +4,7 @@
 //! parabolas, s is made of cubics, which is what a timing's points say. (A moving average as trajectory filter: Biagiotti
 //! and Melchiorri, Trajectory Planning for Automatic Machines and Robots, 2008, ch. 4.)
 
+use super::knots::join_runs;
 use super::{Run, TimingPoint, passes};
 use alloc::vec;
 use alloc::vec::Vec;
@@ -116,27 +117,7 @@ pub(super) fn join(
         let same = (begin - before).abs() <= room && (end - after).abs() <= room;
         same && !turns_back(points[from], points[to]) && holds(points[from], points[to])
     };
-    let mut kept = Vec::new();
-    let mut from = 0;
-    while from + 1 < points.len() {
-        kept.push(points[from]);
-        let barrier = (from + 1..points.len())
-            .find(|index| fixed.contains(&points[*index].s_m))
-            .unwrap_or(points.len() - 1);
-        let (mut to, mut stride) = (from + 1, 1);
-        while stride > 0 {
-            let next = (to + stride).min(barrier);
-            if next > to && joins(from, next) {
-                to = next;
-                stride *= 2;
-            } else {
-                stride /= 2;
-            }
-        }
-        from = to;
-    }
-    kept.push(points[points.len() - 1]);
-    kept
+    join_runs(points, |point| fixed.contains(&point.s_m), joins)
 }
 
 /// Adds a point where two pieces of path join, on the cubic that passes there; a point that is all but there gives way.

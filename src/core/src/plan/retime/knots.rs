@@ -96,13 +96,23 @@ pub(super) fn thin(run: &Run<'_>, limits: &dyn Limits, grid: &Grid, knots: &[Kno
                 (knots[to].s_m, knots[to].square),
             )
     };
-    let mut kept = Vec::with_capacity(knots.len());
+    join_runs(knots, |knot| knot.fixed, joins)
+}
+
+/// Keeps of a chain its ends, what is `fixed`, and as little else as `joins` allows between one that is kept and the next.
+/// Strides double while they hold and halve where they do not, so that long runs cost few trials.
+pub(super) fn join_runs<T: Copy>(
+    chain: &[T],
+    fixed: impl Fn(&T) -> bool,
+    joins: impl Fn(usize, usize) -> bool,
+) -> Vec<T> {
+    let last = chain.len() - 1;
+    let mut kept = Vec::with_capacity(chain.len());
     let mut from = 0;
-    while from + 1 < knots.len() {
-        kept.push(knots[from]);
-        let barrier = (from + 1..knots.len()).find(|index| knots[*index].fixed).unwrap_or(knots.len() - 1);
-        let mut to = from + 1;
-        let mut stride = 1;
+    while from < last {
+        kept.push(chain[from]);
+        let barrier = (from + 1..last).find(|index| fixed(&chain[*index])).unwrap_or(last);
+        let (mut to, mut stride) = (from + 1, 1);
         while stride > 0 {
             let next = (to + stride).min(barrier);
             if next > to && joins(from, next) {
@@ -114,7 +124,7 @@ pub(super) fn thin(run: &Run<'_>, limits: &dyn Limits, grid: &Grid, knots: &[Kno
         }
         from = to;
     }
-    kept.push(knots[knots.len() - 1]);
+    kept.push(chain[last]);
     kept
 }
 
