@@ -37,7 +37,7 @@ pub struct Reach {
 impl Reach {
     /// The worst case of a machine.
     pub fn new(vehicle: &dyn Vehicle, params: &Params) -> Self {
-        let (speed, deceleration) = (vehicle.top_speed_m_s(), vehicle.path_accel_m_s2(0.0));
+        let (speed, deceleration) = (vehicle.top_speed_m_s(), vehicle.path_decel_m_s2(0.0));
         Self {
             top_speed_m_s: speed,
             deceleration_m_s2: deceleration,

@@ -75,9 +75,9 @@ impl Run {
         let (speed, turn_rate) =
             (reference.velocity.speed_m_s.abs(), reference.velocity.turn_rate_rad_s.abs());
         self.rate_change_1_s = if speed > RESTING {
-            -share * vehicle.path_accel_m_s2(reference.curvature_1_m) / speed
+            -share * vehicle.path_decel_m_s2(reference.curvature_1_m) / speed
         } else if turn_rate > RESTING {
-            -share * vehicle.pivot_accel_rad_s2().unwrap_or(f64::INFINITY) / turn_rate
+            -share * vehicle.pivot_decel_rad_s2().unwrap_or(f64::INFINITY) / turn_rate
         } else {
             f64::NEG_INFINITY
         };

@@ -167,8 +167,8 @@ impl<G: Geometry> Stretch for Path<G> {
     fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64 {
         // Only the bends that a stop from the end's speed could reach count; twice that distance is safely all of them.
         let (exit, extent) = (self.timing.exit_rate(), self.extent());
-        let reach = exit * exit / vehicle.path_accel_m_s2(0.0);
-        vehicle.path_accel_m_s2(self.sharpest((extent - reach).max(0.0), extent))
+        let reach = exit * exit / vehicle.path_decel_m_s2(0.0);
+        vehicle.path_decel_m_s2(self.sharpest((extent - reach).max(0.0), extent))
     }
 
     fn brake_from_s(&self, exit: f64, decel: f64) -> Option<f64> {

@@ -97,7 +97,7 @@ impl Stretch for Pivot {
 
     fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64 {
         // A machine that cannot pivot has no plan with one: `first_excess`, or the check, refuses it.
-        vehicle.pivot_accel_rad_s2().unwrap_or(AT_ONCE_RAD_S2)
+        vehicle.pivot_decel_rad_s2().unwrap_or(AT_ONCE_RAD_S2)
     }
 
     fn brake_from_s(&self, exit: f64, decel: f64) -> Option<f64> {

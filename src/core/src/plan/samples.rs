@@ -373,11 +373,11 @@ impl Stretch for Samples {
     fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64 {
         let last = self.points.len() - 2;
         if self.piece(last).on_the_spot {
-            return vehicle.pivot_accel_rad_s2().unwrap_or(super::pivot::AT_ONCE_RAD_S2);
+            return vehicle.pivot_decel_rad_s2().unwrap_or(super::pivot::AT_ONCE_RAD_S2);
         }
         // Only the bends that a stop from the end's speed could reach count; twice that distance is safely all of them.
         let exit = self.points[last + 1].speed_m_s;
-        let reach = exit * exit / vehicle.path_accel_m_s2(0.0);
+        let reach = exit * exit / vehicle.path_decel_m_s2(0.0);
         let mut sharpest = 0.0_f64;
         for index in (0..=last)
             .rev()
@@ -388,7 +388,7 @@ impl Stretch for Samples {
                 sharpest = sharpest.max(piece.reference(0.25 * f64::from(step)).curvature_1_m.abs());
             }
         }
-        vehicle.path_accel_m_s2(sharpest)
+        vehicle.path_decel_m_s2(sharpest)
     }
 
     fn brake_from_s(&self, exit: f64, decel: f64) -> Option<f64> {

@@ -142,12 +142,12 @@ pub trait Vehicle: Debug + Send + Sync {
     }
 
     /// The greatest deceleration along a path while this curvature holds, m/s².
-    fn path_accel_m_s2(&self, curvature_1_m: f64) -> f64 {
+    fn path_decel_m_s2(&self, curvature_1_m: f64) -> f64 {
         self.demands(curvature_1_m, 0.0).braking()
     }
 
     /// The greatest turn deceleration on the spot, rad/s²; `None` for a machine that cannot turn on the spot.
-    fn pivot_accel_rad_s2(&self) -> Option<f64> {
+    fn pivot_decel_rad_s2(&self) -> Option<f64> {
         Some(self.spot_demands()?.braking())
     }
 

@@ -44,7 +44,7 @@ pub fn finish(
     machine: Option<&dyn Vehicle>,
 ) -> Result<Finished, Refused> {
     let draft = &mut imported.draft;
-    if machine.is_some_and(|machine| machine.pivot_accel_rad_s2().is_none()) {
+    if machine.is_some_and(|machine| machine.pivot_decel_rad_s2().is_none()) {
         refuse_pivots(&draft.pieces)?;
     }
     if let Some(accel) = wanted.accel {

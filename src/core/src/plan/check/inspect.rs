@@ -178,7 +178,7 @@ impl<'a> Inspector<'a> {
         let (before, after) = (from.reference.velocity.speed_m_s, to.reference.velocity.speed_m_s);
         let (fall, rise) = self.vehicle.accel_bounds_m_s2(0.0, curvature, 0.0, 1.0);
         let accel = if after.abs() >= before.abs() { rise } else { -fall };
-        if accel > 0.0 && accel.is_finite() { accel } else { self.vehicle.path_accel_m_s2(curvature) }
+        if accel > 0.0 && accel.is_finite() { accel } else { self.vehicle.path_decel_m_s2(curvature) }
     }
 
     fn turn_rate_step(&mut self, to: &Look, step: f64) {

@@ -120,9 +120,9 @@ fn near_a_turn_on_the_spot_the_wheel_stays_on_its_side() {
             near(machine.body(&wheels).turn_rate_rad_s, 0.5, 1e-3);
         }
     }
-    assert_eq!(machine.pivot_accel_rad_s2(), Some(0.8 / 1.2));
+    assert_eq!(machine.pivot_decel_rad_s2(), Some(0.8 / 1.2));
     let short = super::machine("steered-wheel", &with(&STEERED_WHEEL, &[("max_steer_rad", 1.57)]));
-    assert_eq!(short.pivot_accel_rad_s2(), None, "1.57 is less than π/2");
+    assert_eq!(short.pivot_decel_rad_s2(), None, "1.57 is less than π/2");
     let excess = short.excess(Motion::Pivot { turn_rate_rad_s: 0.1 });
     assert!(excess.is_some_and(|text| text.contains("turning on the spot")));
     // What it cannot steer it steers as far as it can, at the speed wanted.
