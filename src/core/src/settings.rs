@@ -117,10 +117,24 @@ impl Settings {
         let vehicle = vehicle::build(&self.vehicle.kind, &self.vehicle.values)
             .map_err(|more| within("vehicle", more))
             .ok();
-        let law = law::build(&self.law.name, &self.law.gains).map_err(|more| within("law", more)).ok();
         let node = self.node.checked(params::KEYS).map_err(|more| within("node", more)).ok();
         let params =
             node.as_ref().and_then(|node| Params::new(node).map_err(|more| within("node", more)).ok());
+        let law = match (&vehicle, &params) {
+            (Some((vehicle, _)), Some(params)) => {
+                let context = law::Context {
+                    vehicle: Arc::clone(vehicle),
+                    period_s: params.period_s(),
+                    dead_time_s: params.dead_time.seconds(),
+                };
+                law::build(&self.law.name, &self.law.gains, &context).map_err(|more| within("law", more)).ok()
+            }
+            // Without a machine none can be built, but what is wrong with its gains can be told already.
+            _ => law::gains(&self.law.name, &self.law.gains)
+                .map_err(|more| within("law", more))
+                .err()
+                .and(None),
+        };
         let pose = self.pose.checked(POSE_KEYS).map_err(|more| within("pose", more)).ok();
         let check = self.check.checked(check::KEYS).map_err(|more| within("check", more)).ok();
         let thresholds = check

@@ -32,7 +32,7 @@ impl LawChoice {
         let mut gains = if same { settings.law.gains.clone() } else { Values::default() };
         self.gains.iter().for_each(|(key, value)| gains.set(key, *value));
         // Checked by itself first: a message about "--gain" should not be mixed with what else is wrong.
-        law::build(&name, &gains).map_err(|problems| {
+        law::gains(&name, &gains).map_err(|problems| {
             problems.into_iter().map(|problem| problem.within("law")).collect::<Vec<_>>()
         })?;
         let chosen = Settings { law: LawSettings { name, gains }, ..settings.clone() };

@@ -12,7 +12,7 @@ use std::io;
 use std::path::Path;
 use std::sync::Arc;
 use trackhold_core::geometry::{BodyVelocity, Pose};
-use trackhold_core::law::{Input, Law};
+use trackhold_core::law::{Input, Law, OnPlan};
 use trackhold_core::plan::Reference;
 use trackhold_core::settings::{Checked, Settings};
 use trackhold_core::vehicle::{Vehicle, Wheels, limit};
@@ -53,9 +53,11 @@ pub struct Asked {
 
 /// What a law is asked.
 #[derive(Clone, Copy, Debug)]
-pub struct Question {
+pub struct Question<'a> {
     /// What is wanted.
     pub reference: Reference,
+    /// What lies ahead of it.
+    pub ahead: OnPlan<'a>,
     /// Where the chassis point is.
     pub pose: Pose,
     /// Since the last question, s: what the acceleration limits allow.
@@ -104,7 +106,7 @@ impl Asked {
 
     /// A run begins: the law forgets what was before.
     pub fn begin(&mut self) {
-        self.law.reset();
+        self.law.reset(self.vehicle.body(&self.wheels));
     }
 
     /// The machine is not being driven: zero.
@@ -113,11 +115,12 @@ impl Asked {
     }
 
     /// Asks for a command.
-    pub fn ask(&mut self, question: &Question) -> Answer {
-        let Question { reference, pose, step_s, settle_s, resting } = *question;
-        let input = Input::new(reference, pose);
+    pub fn ask(&mut self, question: &Question<'_>) -> Answer {
+        let Question { reference, ahead, pose, step_s, settle_s, resting } = *question;
+        let last = (self.wheels, self.vehicle.body(&self.wheels));
+        let input = Input::new(reference, &ahead, pose, last, step_s);
         let outside = input.error.heading_rad.abs() > self.law.domain().max_heading_error_rad;
-        let wanted = if resting || outside { BodyVelocity::ZERO } else { self.law.control(&input) };
+        let wanted = if resting || outside { BodyVelocity::ZERO } else { self.law.control(&input).velocity };
         let stopped = outside || !wanted.is_finite();
         let wanted = if stopped { BodyVelocity::ZERO } else { wanted };
         let limited = limit(&*self.vehicle, wanted, reference.curvature_1_m, &self.wheels, step_s);

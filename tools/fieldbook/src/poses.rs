@@ -12,6 +12,7 @@ use std::path::{Path, PathBuf};
 use std::process::ExitCode;
 use trackhold::site::Site;
 use trackhold_core::geometry::{Mount, Pose};
+use trackhold_core::law::OnPlan;
 use trackhold_core::plan::{self, Plan};
 use trackhold_core::settings::Settings;
 
@@ -110,7 +111,8 @@ fn ask_all(
         let settle_s = rows.get(index + 1).map_or(step_s, |next| next.t_s - row.t_s);
         let plan_time_s = row.t_s - plan_begin;
         let (reference, pose) = (plan.at(plan_time_s, &mut cursor), mount.chassis(row.pose));
-        let answer = asked.ask(&Question { reference, pose, step_s, settle_s, resting: false });
+        let ahead = OnPlan { plan, t_s: plan_time_s, rate: 1.0 };
+        let answer = asked.ask(&Question { reference, ahead, pose, step_s, settle_s, resting: false });
         totals.poses += 1;
         totals.limited += u64::from(answer.limited);
         totals.stopped += u64::from(answer.stopped);

@@ -6,7 +6,7 @@
 //! frequency |v_d| √k_y and the damping k_φ/(2√k_y): its shape is fixed per metre travelled. At v_d = 0 there is no
 //! heading feedback.
 
-use super::{Domain, Input, Kind, Law};
+use super::{Domain, Input, Kind, Law, Machines, Wanted};
 use crate::geometry::BodyVelocity;
 use crate::keys::{Bound, Key};
 use crate::math;
@@ -37,7 +37,8 @@ pub(super) const KIND: Kind = Kind {
             "feedback of the heading error; critically damped at 2 √k_y, below it the machine weaves",
         ),
     ],
-    build: |gains| {
+    machines: Machines::All,
+    build: |gains, _| {
         Ok(Box::new(Kanayama {
             k_x: gains.get("k_x"),
             k_y: gains.get("k_y"),
@@ -54,7 +55,7 @@ struct Kanayama {
 }
 
 impl Law for Kanayama {
-    fn control(&self, input: &Input) -> BodyVelocity {
+    fn control(&mut self, input: &Input<'_>) -> Wanted {
         let wanted = input.reference.velocity;
         let (e_x, e_y) = input.robot_frame_error_m();
         // cos e_φ and sin e_φ by the addition theorem: both directions are known.
@@ -66,6 +67,11 @@ impl Law for Kanayama {
                 + speed * self.k_y * e_y
                 + speed.abs() * self.k_heading * error.sin,
         }
+        .into()
+    }
+
+    fn bandwidth_rad_s(&self, speed_m_s: f64) -> f64 {
+        speed_m_s.abs() * math::sqrt(self.k_y)
     }
 
     fn domain(&self) -> Domain {

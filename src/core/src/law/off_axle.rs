@@ -6,7 +6,7 @@
 //! ω = u_y/x_P, v = u_x + (y_P/x_P) u_y. The heading is not controlled: it falls into line behind P for x_P > 0 on the
 //! way forward and x_P < 0 in reverse; else the robot turns round, which the domain says.
 
-use super::{Domain, Input, Kind, Law};
+use super::{Context, Domain, Input, Kind, Law, Machines, Wanted};
 use crate::geometry::{BodyVelocity, Direction, Pose};
 use crate::keys::{Bound, Key, Problem, Values};
 use crate::math;
@@ -51,6 +51,7 @@ pub(super) const KIND: Kind = Kind {
             "factor on the velocity of the reference's own point; 1 follows without lag",
         ),
     ],
+    machines: Machines::All,
     build: OffAxle::build,
 };
 
@@ -65,7 +66,7 @@ struct OffAxle {
 }
 
 impl OffAxle {
-    fn build(gains: &Values) -> Result<Box<dyn Law>, Vec<Problem>> {
+    fn build(gains: &Values, _context: &Context) -> Result<Box<dyn Law>, Vec<Problem>> {
         let x_p_m = gains.get("x_p_m");
         if x_p_m.abs() < MIN_X_P_M {
             let what = format!(
@@ -89,7 +90,7 @@ impl OffAxle {
         ((pose.x_m + arm.0, pose.y_m + arm.1), arm)
     }
 
-    fn point_error(&self, input: &Input) -> (f64, f64) {
+    fn point_error(&self, input: &Input<'_>) -> (f64, f64) {
         let (wanted, _) = self.point(input.reference.pose, input.reference.direction);
         let (actual, _) = self.point(input.pose, input.direction);
         (wanted.0 - actual.0, wanted.1 - actual.1)
@@ -97,7 +98,7 @@ impl OffAxle {
 }
 
 impl Law for OffAxle {
-    fn control(&self, input: &Input) -> BodyVelocity {
+    fn control(&mut self, input: &Input<'_>) -> Wanted {
         let reference = &input.reference;
         let (_, arm) = self.point(reference.pose, reference.direction);
         let (speed, turn_rate) = (reference.velocity.speed_m_s, reference.velocity.turn_rate_rad_s);
@@ -113,6 +114,11 @@ impl Law for OffAxle {
             .direction
             .into_frame(u(ahead.0, error.0, self.integral_m_s.0), u(ahead.1, error.1, self.integral_m_s.1));
         BodyVelocity { speed_m_s: u_x + self.y_p_m / self.x_p_m * u_y, turn_rate_rad_s: u_y / self.x_p_m }
+            .into()
+    }
+
+    fn bandwidth_rad_s(&self, _speed_m_s: f64) -> f64 {
+        self.k_p
     }
 
     fn domain(&self) -> Domain {
@@ -124,7 +130,7 @@ impl Law for OffAxle {
         }
     }
 
-    fn settle(&mut self, input: &Input, limited: bool, seconds: f64) {
+    fn settle(&mut self, input: &Input<'_>, limited: bool, seconds: f64) {
         if self.k_i > 0.0 && !limited {
             let error = self.point_error(input);
             self.integral_m_s.0 += error.0 * seconds;
@@ -132,7 +138,7 @@ impl Law for OffAxle {
         }
     }
 
-    fn reset(&mut self) {
+    fn reset(&mut self, _motion: BodyVelocity) {
         self.integral_m_s = (0.0, 0.0);
     }
 }

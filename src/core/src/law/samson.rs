@@ -5,9 +5,10 @@
 //! v = (v_d − k_1 |v_d| (x_e + y_e tan φ_e)) / cos φ_e, ω = ω_d − (k_2 v_d y_e + k_3 |v_d| tan φ_e) cos² φ_e.
 //! Forward and reverse, straight and curved; |φ_e| < π/2; without feedback at v_d = 0.
 
-use super::{Domain, Input, Kind, Law};
+use super::{Domain, Input, Kind, Law, Machines, Wanted};
 use crate::geometry::BodyVelocity;
 use crate::keys::{Bound, Key};
+use crate::math;
 use alloc::boxed::Box;
 
 /// At a right angle 1/cos φ_e is infinite; short of it by this much it is 11, and the limits still see a usable ratio of
@@ -39,7 +40,8 @@ pub(super) const KIND: Kind = Kind {
             "feedback of the heading error; critically damped at 2 √k_2, below it the machine weaves",
         ),
     ],
-    build: |gains| {
+    machines: Machines::All,
+    build: |gains, _| {
         Ok(Box::new(Samson { k_1: gains.get("k_1"), k_2: gains.get("k_2"), k_3: gains.get("k_3") }))
     },
 };
@@ -52,7 +54,7 @@ struct Samson {
 }
 
 impl Law for Samson {
-    fn control(&self, input: &Input) -> BodyVelocity {
+    fn control(&mut self, input: &Input<'_>) -> Wanted {
         let wanted = input.reference.velocity;
         let (x_e, y_e) = (input.error.along_m, input.error.cross_m);
         let error = input.direction.relative_to(input.reference.direction);
@@ -63,6 +65,11 @@ impl Law for Samson {
             turn_rate_rad_s: wanted.turn_rate_rad_s
                 - (self.k_2 * speed * y_e + self.k_3 * speed.abs() * tan) * error.cos * error.cos,
         }
+        .into()
+    }
+
+    fn bandwidth_rad_s(&self, speed_m_s: f64) -> f64 {
+        speed_m_s.abs() * math::sqrt(self.k_2)
     }
 
     fn domain(&self) -> Domain {

@@ -11,9 +11,11 @@
 //! | `orders` | start gates, stop, reset, plans, acknowledgements |
 //! | `mode` | the mode table |
 //! | `successors` | plans that continue the one in force |
+//! | `ahead` | what a law sees of the plan ahead |
 //! | `run` | following a plan: its clock, ramps, settling |
 //! | `tick` | one control period |
 
+mod ahead;
 mod clock;
 mod intake;
 pub mod mode;

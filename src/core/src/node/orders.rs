@@ -5,7 +5,7 @@ use super::mode::{Trigger, Verdict, follow};
 use super::successors::JointStep;
 use super::{Node, Sink};
 use crate::geometry::Pose;
-use crate::law::Input;
+use crate::math;
 use crate::plan::Plan;
 use crate::time::SpanNs;
 use alloc::boxed::Box;
@@ -172,7 +172,7 @@ impl Node {
 
     fn start(&mut self, start: &Start, sink: &mut impl Sink) -> Result<(), Refusal> {
         let begin = self.pass_start_gates(start)?;
-        self.law.reset();
+        self.law.reset(self.vehicle.body(&self.wheels));
         self.run.begin(begin, self.at);
         let change = self.change(Trigger::Start, Cause::Operator);
         self.emit_change(change, sink);
@@ -204,13 +204,13 @@ impl Node {
             return Err(Refusal::StalePose { age_ns: age.0, limit_ns: self.params.pose_timeout.0 });
         }
         let begin = begin_time(start, plan, estimate.pose, self.run.plan_time())?;
-        let input = Input::new(plan.at((begin - plan.begin()).seconds(), &mut 0), estimate.pose);
-        let distance_m = input.pose.distance_to(input.reference.pose);
+        let reference = plan.at((begin - plan.begin()).seconds(), &mut 0);
+        let distance_m = estimate.pose.distance_to(reference.pose);
         if distance_m > self.params.start_distance_m {
             return Err(Refusal::TooFar { distance_m, limit_m: self.params.start_distance_m });
         }
         let limit_rad = self.params.start_heading_rad.min(domain.max_heading_error_rad);
-        let heading_error_rad = input.error.heading_rad;
+        let heading_error_rad = math::wrap(estimate.pose.heading_rad - reference.pose.heading_rad);
         if heading_error_rad.abs() > limit_rad {
             return Err(Refusal::TurnedAway { heading_error_rad, limit_rad });
         }

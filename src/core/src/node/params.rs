@@ -16,6 +16,13 @@ pub const KEYS: &[Key] = &[
         "ticks a second; a slow tick adds to the dead time of the loop",
     ),
     Key::with_default(
+        "dead_time_s",
+        "s",
+        0.0,
+        Bound::within(0.0, 1.0),
+        "from a tick to the moment at which its command moves the machine; measure it, the laws reckon with it",
+    ),
+    Key::with_default(
         "pose_timeout_s",
         "s",
         0.25,
@@ -165,6 +172,7 @@ pub const KEYS: &[Key] = &[
 )]
 pub struct Params {
     pub rate_hz: f64,
+    pub dead_time: SpanNs,
     pub pose_timeout: SpanNs,
     pub pose_lease: SpanNs,
     pub pose_slack_m: f64,
@@ -196,6 +204,7 @@ impl Params {
         let span = |key: &str| SpanNs::from_seconds(values.get(key));
         let params = Self {
             rate_hz: values.get("rate_hz"),
+            dead_time: span("dead_time_s"),
             pose_timeout: span("pose_timeout_s"),
             pose_lease: span("pose_lease_s"),
             pose_slack_m: values.get("pose_slack_m"),

@@ -53,6 +53,11 @@ impl Run {
         self.time
     }
 
+    /// The segment of the last lookup.
+    pub(super) fn cursor(&self) -> usize {
+        self.cursor
+    }
+
     pub(super) fn rate(&self) -> f64 {
         self.rate
     }

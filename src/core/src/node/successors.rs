@@ -105,6 +105,12 @@ impl Successors {
         self.plans.push(plan);
     }
 
+    /// The waiting plan that will be in force at a plan time; none if that is the one in force now.
+    pub(super) fn in_force_at(&self, time: SpanNs) -> Option<&Plan> {
+        let begun = self.plans.partition_point(|waiting| waiting.begin() <= time);
+        begun.checked_sub(1).map(|last| &*self.plans[last])
+    }
+
     /// The plan that is in force from now on, if one's plan time was reached.
     pub(super) fn due(&mut self, reached: SpanNs, sink: &mut impl Sink) -> Option<Box<Plan>> {
         let due = self.plans.partition_point(|waiting| waiting.begin() <= reached);

@@ -1,5 +1,6 @@
 //! One control period: guards, reference, law, limits, record.
 
+use super::ahead::PlanAhead;
 use super::mode::Trigger;
 use super::{Node, Sink};
 use crate::geometry::{BodyVelocity, Pose};
@@ -92,25 +93,52 @@ impl Node {
         let Some(reference) = self.next_reference(seconds) else {
             unreachable!("a start needs a plan, and none is taken away while one is followed")
         };
-        let input = Input::new(reference, pose);
-        fill_reference(record, &input);
-        if input.error.heading_rad.abs() > self.law.domain().max_heading_error_rad {
-            record.flags |= flag::OUTSIDE_LAW_DOMAIN;
-            return self.guard_protective(at, Cause::OutsideLawDomain);
+        match self.control(reference, pose, seconds, record) {
+            Ok(body) => self.end_of_run(body, record),
+            Err(cause) => self.guard_protective(at, cause),
         }
-        let wanted = self.wanted(&input, record);
+    }
+
+    /// Asks the law and applies the limits; the body velocity that the new command amounts to, or why the machine has to
+    /// stop.
+    fn control(
+        &mut self,
+        reference: Reference,
+        pose: Pose,
+        seconds: f64,
+        record: &mut TickRecord,
+    ) -> Result<BodyVelocity, Cause> {
+        let since_end = self.past_end().filter(|_| self.mode == Mode::Tracking);
+        let Self { plan: Some(plan), successors, run, vehicle, law, params, wheels, .. } = self else {
+            unreachable!("the reference came from a plan")
+        };
+        let ahead = PlanAhead::new(plan, successors, run);
+        let input = Input::new(reference, &ahead, pose, (*wheels, vehicle.body(wheels)), seconds);
+        fill_reference(record, &input);
+        if input.error.heading_rad.abs() > law.domain().max_heading_error_rad {
+            record.flags |= flag::OUTSIDE_LAW_DOMAIN;
+            return Err(Cause::OutsideLawDomain);
+        }
+        let mut wanted = if run.coming_to_rest { BodyVelocity::ZERO } else { law.control(&input).velocity };
+        if let Some(since_end) = since_end {
+            record.flags |= flag::SETTLING;
+            run.settle(wanted, since_end, params);
+        }
+        if run.coming_to_rest {
+            wanted = BodyVelocity::ZERO;
+        }
         if !wanted.is_finite() {
             record.flags |= flag::LAW_NOT_FINITE;
-            return self.guard_protective(at, Cause::LawNotFinite);
+            return Err(Cause::LawNotFinite);
         }
         record.wanted_speed_m_s = wanted.speed_m_s;
         record.wanted_turn_rate_rad_s = wanted.turn_rate_rad_s;
-        let limited = limit(&*self.vehicle, wanted, reference.curvature_1_m, &self.wheels, seconds);
-        self.law.settle(&input, limited.speed_limited || limited.step_limited, self.params.period_s());
+        let limited = limit(&**vehicle, wanted, reference.curvature_1_m, wheels, seconds);
+        law.settle(&input, limited.speed_limited || limited.step_limited, params.period_s());
         record.flags |= if limited.speed_limited { flag::SPEED_LIMITED } else { 0 };
         record.flags |= if limited.step_limited { flag::STEP_LIMITED } else { 0 };
-        self.wheels = limited.wheels;
-        self.end_of_run(limited.body, record)
+        *wheels = limited.wheels;
+        Ok(limited.body)
     }
 
     /// The reference of this tick; a controlled stop slows the plan's time first.
@@ -120,16 +148,6 @@ impl Node {
             self.run.ramp_down(plan, &*self.vehicle, self.params.controlled_stop_share, seconds);
         }
         Some(self.run.reference(plan))
-    }
-
-    /// What the law wants, or zero once the run comes to rest.
-    fn wanted(&mut self, input: &Input, record: &mut TickRecord) -> BodyVelocity {
-        let wanted = if self.run.coming_to_rest { BodyVelocity::ZERO } else { self.law.control(input) };
-        if let Some(since_end) = self.past_end().filter(|_| self.mode == Mode::Tracking) {
-            record.flags |= flag::SETTLING;
-            self.run.settle(wanted, since_end, &self.params);
-        }
-        if self.run.coming_to_rest { BodyVelocity::ZERO } else { wanted }
     }
 
     /// How long ago a closed plan ended.

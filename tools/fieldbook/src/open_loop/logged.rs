@@ -10,6 +10,7 @@ use serde_json::json;
 use std::path::Path;
 use std::process::ExitCode;
 use trackhold_core::geometry::Pose;
+use trackhold_core::law::OnPlan;
 use trackhold_core::plan::{self, Plan};
 use trackhold_core::settings::Settings;
 use trackhold_core::time::SpanNs;
@@ -185,8 +186,15 @@ impl Logged {
         let resting = at_rest
             && (record.has(flag::SETTLING) || record.mode == Mode::ControlledStop || record.plan_rate == 0.0);
         let pose = Pose::new(record.x_m, record.y_m, record.heading_rad);
-        let answer =
-            self.asked.ask(&Question { reference, pose, step_s: seconds, settle_s: period_s, resting });
+        let ahead = OnPlan { plan, t_s: place.seconds(), rate: record.plan_rate };
+        let answer = self.asked.ask(&Question {
+            reference,
+            ahead,
+            pose,
+            step_s: seconds,
+            settle_s: period_s,
+            resting,
+        });
         self.following = matches!(record.mode, Mode::Tracking | Mode::ControlledStop);
         self.note(record, &answer);
     }

@@ -1,0 +1,57 @@
+//! What tests of laws share: machines, and one question to a law.
+
+use super::{Context, Input, Law, Steady, Wanted, build};
+use crate::geometry::{BodyVelocity, Pose};
+use crate::keys::Values;
+use crate::plan::Reference;
+use crate::vehicle;
+use alloc::boxed::Box;
+
+/// A machine of each kind that a law may have to drive, by its kind's name, with a tick of 20 ms and no dead time.
+pub(crate) fn context(kind: &str) -> Context {
+    let numbers: &[(&str, f64)] = match kind {
+        "unicycle" => &[
+            ("max_speed_m_s", 1.5),
+            ("max_turn_rate_rad_s", 2.0),
+            ("max_accel_m_s2", 1.0),
+            ("max_turn_accel_rad_s2", 3.0),
+        ],
+        "differential" => &[
+            ("wheel_radius_m", 0.1),
+            ("track_width_m", 0.5),
+            ("max_wheel_speed_rad_s", 12.0),
+            ("max_wheel_accel_rad_s2", 15.0),
+        ],
+        "car" => &[
+            ("wheelbase_m", 1.2),
+            ("max_steer_rad", 0.6),
+            ("max_steer_rate_rad_s", 0.8),
+            ("max_speed_m_s", 1.5),
+            ("max_accel_m_s2", 1.0),
+        ],
+        other => unreachable!("no test machine of kind {other}"),
+    };
+    let mut values = Values::default();
+    numbers.iter().for_each(|(key, value)| values.set(key, *value));
+    let (vehicle, _) = vehicle::build(kind, &values).expect("a good machine");
+    Context { vehicle, period_s: 0.02, dead_time_s: 0.0 }
+}
+
+/// A law on a machine of a kind, its other gains as by default.
+pub(crate) fn law_on(kind: &str, name: &str, gains: &[(&str, f64)]) -> Box<dyn Law> {
+    let mut values = Values::default();
+    gains.iter().for_each(|(gain, value)| values.set(gain, *value));
+    build(name, &values, &context(kind)).expect("a law for this machine").0
+}
+
+/// A reference that moves on as it does now.
+pub(crate) fn moving(pose: Pose, speed_m_s: f64, turn_rate_rad_s: f64) -> Reference {
+    let curvature = if speed_m_s == 0.0 { 0.0 } else { turn_rate_rad_s / speed_m_s };
+    Reference { velocity: BodyVelocity { speed_m_s, turn_rate_rad_s }, ..Reference::at_rest(pose, curvature) }
+}
+
+/// What a law wants on a machine that was moving as its reference does.
+pub(crate) fn ask(law: &mut dyn Law, reference: Reference, pose: Pose) -> Wanted {
+    let ahead = Steady(reference);
+    law.control(&Input::new(reference, &ahead, pose, ([0.0; 4], reference.velocity), 0.02))
+}
