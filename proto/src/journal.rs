@@ -7,7 +7,7 @@
 
 use crate::blob::{BootId, Digest, Text, to_hex};
 use crate::message::{Command, Pose, Start, WheelLayout};
-use crate::words::{Cause, Mode, Refusal, StopKind};
+use crate::words::{Cause, Mode, Refusal, Regime, StopKind};
 use alloc::string::String;
 use alloc::vec::Vec;
 use bincode::{Decode, Encode};
@@ -267,9 +267,17 @@ pub mod flag {
     pub const POSE_IMPLAUSIBLE: u32 = 1 << 9;
     /// Guard, warning: more than the pose timeout lay between the last two poses.
     pub const POSE_GAP: u32 = 1 << 10;
+    /// The law left this tick to the law that it falls back to.
+    pub const LAW_FALLBACK: u32 = 1 << 11;
+    /// A jump of the pose is being slewed in: the pose used lags behind the estimator's.
+    pub const POSE_SLEWED: u32 = 1 << 12;
+    /// The plan's time runs slower because the machine lags behind its reference.
+    pub const PLAN_SLOWED: u32 = 1 << 13;
+    /// Warning: the law's bandwidth times the dead time, age of the pose included, leaves the safe range.
+    pub const THIN_MARGIN: u32 = 1 << 14;
 
     /// Names of the bits, in order.
-    pub const NAMES: [&str; 11] = [
+    pub const NAMES: [&str; 15] = [
         "has-pose",
         "has-reference",
         "settling",
@@ -281,6 +289,10 @@ pub mod flag {
         "plan-dry",
         "pose-implausible",
         "pose-gap",
+        "law-fallback",
+        "pose-slewed",
+        "plan-slowed",
+        "thin-margin",
     ];
 }
 
@@ -295,19 +307,23 @@ pub struct TickRecord {
     pub mode: Mode,
     /// Why the node is in that mode.
     pub cause: Cause,
+    /// How the node follows its plan.
+    pub regime: Regime,
     /// See [`flag`].
     pub flags: u32,
     /// The start number in force after this tick.
     pub start_number: u64,
     /// The plan's own time, ns.
     pub plan_time_ns: u64,
-    /// How fast the plan's time runs; 1 but on a controlled stop's ramp.
+    /// How fast the plan's time runs, at most 1.
     pub plan_rate: f64,
+    /// The operator's cap on that.
+    pub speed_cap: f64,
     /// Age of the pose used, ns.
     pub pose_age_ns: u64,
     /// Offset of the pose source's clock: daemon's minus sender's, ns.
     pub clock_offset_ns: i64,
-    /// Pose of the chassis point in the site frame, m.
+    /// Pose of the chassis point in the site frame, carried forward to the moment at which the command acts, m.
     pub x_m: f64,
     /// Pose of the chassis point in the site frame, m.
     pub y_m: f64,
@@ -442,10 +458,12 @@ impl TickRecord {
             at_ns: 0,
             mode: Mode::Standby,
             cause: Cause::Boot,
+            regime: Regime::None,
             flags: 0,
             start_number: 0,
             plan_time_ns: 0,
             plan_rate: 1.0,
+            speed_cap: 1.0,
             pose_age_ns: 0,
             clock_offset_ns: 0,
             x_m: 0.0,

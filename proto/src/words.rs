@@ -77,6 +77,8 @@ pub enum Cause {
     LostTrip,
     /// The program is being ended.
     Shutdown,
+    /// The pose jumped farther than may be slewed in.
+    PoseJump,
 }
 
 impl Cause {
@@ -95,11 +97,52 @@ impl Cause {
             Self::StalledLoop => "stalled-loop",
             Self::LostTrip => "lost-trip",
             Self::Shutdown => "shutdown",
+            Self::PoseJump => "pose-jump",
         }
     }
 }
 
 impl fmt::Display for Cause {
+    fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+        f.pad(self.name())
+    }
+}
+
+/// How the node follows its plan now: which feedback is in force.
+#[derive(
+    Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Hash, Encode, Decode, Serialize, Deserialize,
+)]
+#[serde(rename_all = "kebab-case")]
+pub enum Regime {
+    /// It follows none.
+    None,
+    /// The reference moves, and the law follows it.
+    Moving,
+    /// The reference turns on the spot.
+    Pivoting,
+    /// The reference rests, and the machine settles on its pose.
+    Settling,
+    /// The heading is too far off for the law: the machine turns on the spot towards the reference's heading.
+    Realigning,
+}
+
+impl Regime {
+    /// All regimes, in wire order.
+    pub const ALL: [Self; 5] = [Self::None, Self::Moving, Self::Pivoting, Self::Settling, Self::Realigning];
+
+    /// The name people and logs use.
+    pub const fn name(self) -> &'static str {
+        match self {
+            Self::None => "none",
+            Self::Moving => "moving",
+            Self::Pivoting => "pivoting",
+            Self::Settling => "settling",
+            Self::Realigning => "realigning",
+        }
+    }
+}
+
+impl fmt::Display for Regime {
     fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
         f.pad(self.name())
     }

@@ -73,8 +73,8 @@ fn a_wrong_value_is_refused_by_its_field() {
             "payload of command, read up to byte 8: WheelLayout has no value 5, only 0 to 4",
         ),
         (
-            with("status", 28, &[12]),
-            "payload of status, read up to byte 32: Cause has no value 12, only 0 to 11",
+            with("status", 28, &[13]),
+            "payload of status, read up to byte 32: Cause has no value 13, only 0 to 12",
         ),
         (with("stop", 0, &[2]), "payload of stop, read up to byte 4: StopKind has no value 2, only 0 to 1"),
         (

@@ -154,7 +154,7 @@ fn the_refusals_are_all_there_and_no_others() {
         assert_eq!(row[0], number.to_string());
         let sizes = row[2].split_terminator(", ").map(|field| match field.split_once(' ').unwrap().1 {
             "bool" => 1,
-            "mode" | "cause" | "u32" => 4,
+            "mode" | "cause" | "regime" | "u32" => 4,
             _ => 8,
         });
         match read_zeros(11, 16, number, sizes.sum()) {

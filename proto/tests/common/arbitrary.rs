@@ -56,8 +56,13 @@ fn cause() -> BoxedStrategy<Cause> {
         StalledLoop,
         LostTrip,
         Shutdown,
+        PoseJump,
     ];
     select(all.to_vec()).boxed()
+}
+
+fn regime() -> BoxedStrategy<Regime> {
+    select(Regime::ALL.to_vec()).boxed()
 }
 
 fn pose() -> BoxedStrategy<Pose> {
@@ -283,17 +288,19 @@ fn any_step() -> BoxedStrategy<Refusal> {
 }
 
 fn any_tick() -> BoxedStrategy<TickRecord> {
-    let numbers = vec(number(), 16);
-    ((mode(), cause(), any::<u32>()), vec(whole(), 5), any::<i64>(), numbers, command())
-        .prop_map(|((mode, cause, flags), w, clock_offset_ns, f, command)| TickRecord {
+    let numbers = vec(number(), 17);
+    ((mode(), cause(), regime(), any::<u32>()), vec(whole(), 5), any::<i64>(), numbers, command())
+        .prop_map(|((mode, cause, regime, flags), w, clock_offset_ns, f, command)| TickRecord {
             tick: w[0],
             at_ns: w[1],
             mode,
             cause,
+            regime,
             flags,
             start_number: w[2],
             plan_time_ns: w[3],
             plan_rate: f[0],
+            speed_cap: f[16],
             pose_age_ns: w[4],
             clock_offset_ns,
             x_m: f[1],
