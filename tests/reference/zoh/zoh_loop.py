@@ -29,6 +29,10 @@ Conventions
     cross is positive to the left; headings wrapped to (-pi, pi].
     dt in the limits and in the integral of the off-axle law is 1/rate_hz; the
     motion between ticks lasts exactly t_(k+1) - t_k.
+    Regimes: a law without feedback at rest leaves a reference that turns on the
+    spot to v = k e_x, omega = omega_d - k (heading error), k = 2 1/s; a
+    reference that rests is left alone, for the dead band here is a metre and a
+    radian. The plan's time never slows and regimes change without blending.
     "Changed by the limits" means: the speed factor s < 1, or the step factor
     lambda < 1, or (car) the steering angle was clamped.
 
@@ -345,6 +349,22 @@ class OffAxle:
             self.integral = self.integral + self.error * self.dt
 
 
+NODE = {"min_plan_rate": 1.0, "blend_s": 0.0, "settle_rate_1_s": 2.0,
+        "settle_distance_m": 1.0, "settle_heading_rad": 1.0}
+
+
+def in_regime(law, pose, ref, vd, wd):
+    """The wanted (v, omega) of the feedback in force, and whether that is the law."""
+    if abs(vd) >= 1e-3 or (abs(wd) >= 1e-3 and isinstance(law, OffAxle)):
+        return law.wanted(pose, ref, vd, wd), True
+    if abs(wd) < 1e-3:
+        return (0.0, 0.0), False
+    k = NODE["settle_rate_1_s"]
+    c, s = math.cos(pose[2]), math.sin(pose[2])
+    ex = c * (ref[0] - pose[0]) + s * (ref[1] - pose[1])
+    return (k * ex, wd - k * tracking_error(pose, ref)[2]), False
+
+
 LAWS = {"kanayama": Kanayama, "samson": Samson, "off-axle": OffAxle}
 
 
@@ -392,9 +412,10 @@ def run(case, move):
         ref, vd, wd, kappa = plan.at(t)
         err = tracking_error(pose, ref)
         assert abs(abs(err[2]) - math.pi) > 1e-3
-        v, w = law.wanted(pose, ref, vd, wd)
+        (v, w), by_law = in_regime(law, pose, ref, vd, wd)
         (cv, cw), changed = vehicle.limit(v, w, kappa, note)
-        law.settle(changed)
+        if by_law:
+            law.settle(changed)
         trail.append((t, pose[0], pose[1], wrap(pose[2]), ref[0], ref[1], wrap(ref[2]),
                       vd, wd, *err, cv, cw))
         pose = move(pose, cv, cw, (tick_ns(k + 1, rate) - now) / 1e9)
@@ -509,7 +530,8 @@ def site_toml(c):
         rows.append(f'{k} = "{v}"' if isinstance(v, str) else f"{k} = {float(v)!r}")
     rows += ["", "[law]", f'name = "{c["law"]}"', "", "[law.gains]"]
     rows += [f"{k} = {float(v)!r}" for k, v in c["gains"].items()]
-    rows += ["", "[node]", f"rate_hz = {c['rate_hz']!r}", ""]
+    rows += ["", "[node]", f"rate_hz = {c['rate_hz']!r}"]
+    rows += [f"{k} = {v!r}" for k, v in NODE.items()] + [""]
     if c["vehicle"]["kind"] == "car":
         # The arcs of these plans join without clothoids; the tables say what a law makes of that.
         rows += ["[check]", "curvature_step_1_m = 2.0", ""]

@@ -12,9 +12,10 @@ use std::io;
 use std::path::Path;
 use std::sync::Arc;
 use trackhold_core::geometry::{BodyVelocity, Pose};
-use trackhold_core::law::{Input, Law, OnPlan};
+use trackhold_core::law::{Feedback, Input, OnPlan};
 use trackhold_core::plan::Reference;
 use trackhold_core::settings::{Checked, Settings};
+use trackhold_core::time::TimeNs;
 use trackhold_core::vehicle::{Vehicle, Wheels, limit};
 
 /// Said with every result.
@@ -45,7 +46,7 @@ const COLUMNS: [&str; 18] = [
 /// A law with its machine, asked at one pose after the other.
 #[derive(Debug)]
 pub struct Asked {
-    law: Box<dyn Law>,
+    feedback: Feedback,
     vehicle: Arc<dyn Vehicle>,
     period_s: f64,
     wheels: Wheels,
@@ -54,6 +55,10 @@ pub struct Asked {
 /// What a law is asked.
 #[derive(Clone, Copy, Debug)]
 pub struct Question<'a> {
+    /// The moment, on any clock.
+    pub at: TimeNs,
+    /// The reference's motion with the plan's time at rate 1.
+    pub literal: BodyVelocity,
     /// What is wanted.
     pub reference: Reference,
     /// What lies ahead of it.
@@ -91,7 +96,8 @@ impl Asked {
     /// From checked settings.
     pub fn new(checked: Checked) -> Self {
         let Checked { law, vehicle, params, .. } = checked;
-        Self { law, vehicle, period_s: params.period_s(), wheels: [0.0; 4] }
+        let feedback = Feedback::new(law, Arc::clone(&vehicle), params.feedback());
+        Self { feedback, vehicle, period_s: params.period_s(), wheels: [0.0; 4] }
     }
 
     /// The machine.
@@ -106,7 +112,7 @@ impl Asked {
 
     /// A run begins: the law forgets what was before.
     pub fn begin(&mut self) {
-        self.law.reset(self.vehicle.body(&self.wheels));
+        self.feedback.begin(self.vehicle.body(&self.wheels));
     }
 
     /// The machine is not being driven: zero.
@@ -116,13 +122,13 @@ impl Asked {
 
     /// Asks for a command.
     pub fn ask(&mut self, question: &Question<'_>) -> Answer {
-        let Question { reference, ahead, pose, step_s, settle_s, resting } = *question;
+        let Question { at, literal, reference, ahead, pose, step_s, settle_s, resting } = *question;
         let last = (self.wheels, self.vehicle.body(&self.wheels));
         let input = Input::new(reference, &ahead, pose, last, step_s);
-        let outside = input.error.heading_rad.abs() > self.law.domain().max_heading_error_rad;
-        let wanted = if resting || outside { BodyVelocity::ZERO } else { self.law.control(&input).velocity };
-        let stopped = outside || !wanted.is_finite();
-        let wanted = if stopped { BodyVelocity::ZERO } else { wanted };
+        self.feedback.choose(literal, input.error.heading_rad);
+        let answer = self.feedback.control(at, &input).map(|wanted| wanted.velocity);
+        let stopped = !answer.is_ok_and(BodyVelocity::is_finite);
+        let wanted = answer.ok().filter(|_| !stopped && !resting).unwrap_or(BodyVelocity::ZERO);
         let limited = limit(&*self.vehicle, wanted, reference.curvature_1_m, &self.wheels, step_s);
         let changed = limited.speed_limited || limited.step_limited;
         let mut answer = Answer {
@@ -138,7 +144,7 @@ impl Asked {
             answer.wheels = self.vehicle.zero(&self.wheels);
             answer.body = self.vehicle.body(&answer.wheels);
         } else {
-            self.law.settle(&input, changed, settle_s);
+            self.feedback.settle(&input, changed, settle_s);
         }
         self.wheels = answer.wheels;
         answer

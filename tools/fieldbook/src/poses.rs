@@ -15,6 +15,7 @@ use trackhold_core::geometry::{Mount, Pose};
 use trackhold_core::law::OnPlan;
 use trackhold_core::plan::{self, Plan};
 use trackhold_core::settings::Settings;
+use trackhold_core::time::{SpanNs, TimeNs};
 
 /// The columns that a table of poses must have.
 const COLUMNS: [&str; 4] = ["t_s", "x_m", "y_m", "heading_rad"];
@@ -112,7 +113,9 @@ fn ask_all(
         let plan_time_s = row.t_s - plan_begin;
         let (reference, pose) = (plan.at(plan_time_s, &mut cursor), mount.chassis(row.pose));
         let ahead = OnPlan { plan, t_s: plan_time_s, rate: 1.0 };
-        let answer = asked.ask(&Question { reference, ahead, pose, step_s, settle_s, resting: false });
+        let (at, literal) = (TimeNs(0) + SpanNs::from_seconds(row.t_s - rows[0].t_s), reference.velocity);
+        let question = Question { at, literal, reference, ahead, pose, step_s, settle_s, resting: false };
+        let answer = asked.ask(&question);
         totals.poses += 1;
         totals.limited += u64::from(answer.limited);
         totals.stopped += u64::from(answer.stopped);

@@ -1,10 +1,14 @@
 //! How to follow: a law computes a body velocity from reference and pose. One file a law, one trait, one table.
 
+pub mod at_rest;
+mod blend;
+mod feedback;
 mod input;
 mod kanayama;
 mod off_axle;
 mod samson;
 
+pub use feedback::{Feedback, FeedbackParams, OutsideDomain};
 pub use input::{Ahead, Context, Input, OnPlan, Steady};
 
 use crate::geometry::BodyVelocity;

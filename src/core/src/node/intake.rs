@@ -105,6 +105,11 @@ impl PoseIntake {
         }
     }
 
+    /// The session whose poses are taken, if there was any.
+    pub(super) fn source(&self) -> Option<u64> {
+        self.source.as_ref().map(|source| source.session)
+    }
+
     /// The newest pose, however old.
     pub(super) fn estimate(&self) -> Option<&Estimate> {
         self.estimate.as_ref()

@@ -11,15 +11,19 @@
 //! | `orders` | start gates, stop, reset, plans, acknowledgements |
 //! | `mode` | the mode table |
 //! | `successors` | plans that continue the one in force |
+//! | `carry` | the pose carried forward to the moment at which a command acts; jumps of the estimator |
+//! | `pace` | how fast the plan's time runs |
 //! | `ahead` | what a law sees of the plan ahead |
 //! | `run` | following a plan: its clock, ramps, settling |
 //! | `tick` | one control period |
 
 mod ahead;
+mod carry;
 mod clock;
 mod intake;
 pub mod mode;
 mod orders;
+mod pace;
 pub mod params;
 mod run;
 mod successors;
@@ -28,7 +32,7 @@ mod tick;
 use crate::BUILD;
 use crate::geometry::Mount;
 use crate::keys::Problem;
-use crate::law::Law;
+use crate::law::Feedback;
 use crate::plan::Plan;
 use crate::plan::check::Terms;
 use crate::settings::Settings;
@@ -38,6 +42,7 @@ use alloc::boxed::Box;
 use alloc::string::{String, ToString};
 use alloc::sync::Arc;
 use alloc::vec::Vec;
+use carry::Carrier;
 use intake::{Lease, PoseIntake};
 use mode::{Trigger, Verdict, follow};
 use orders::OrderMemory;
@@ -93,7 +98,7 @@ impl Sink for Vec<Entry> {
 pub struct Node {
     boot: BootId,
     vehicle: Arc<dyn Vehicle>,
-    law: Box<dyn Law>,
+    feedback: Feedback,
     mount: Mount,
     params: Params,
     terms: Terms,
@@ -105,6 +110,7 @@ pub struct Node {
     cause: Cause,
     numbers: StartNumbers,
     poses: PoseIntake,
+    carrier: Carrier,
     plan: Option<Box<Plan>>,
     successors: Successors,
     planner: Option<Lease>,
@@ -154,10 +160,9 @@ impl Node {
         let terms = checked.terms();
         let mut node = Self {
             boot,
+            feedback: Feedback::new(checked.law, Arc::clone(&checked.vehicle), checked.params.feedback()),
             vehicle: checked.vehicle,
-            law: checked.law,
             mount: checked.mount,
-            params: checked.params,
             terms,
             at,
             next_entry: 0,
@@ -167,6 +172,8 @@ impl Node {
             cause: Cause::Boot,
             numbers: StartNumbers::new(seed),
             poses: PoseIntake::default(),
+            carrier: Carrier::new(&checked.params),
+            params: checked.params,
             plan: None,
             successors: Successors::new(),
             planner: None,
@@ -243,10 +250,17 @@ impl Node {
 
     fn pose(&mut self, event: PoseEvent, sink: &mut impl Sink) {
         self.emit(Body::Pose(event), sink);
+        let source = self.poses.source();
         let taken = self.poses.take(&event, self.mount, self.vehicle.top_speed_m_s(), &self.params);
         if let Err(refusal) = taken {
             let refused = PoseRefused { session: event.session, sequence: event.sequence, refusal };
             self.emit(Body::PoseRefused(refused), sink);
+            return;
+        }
+        if let Some(estimate) = self.poses.estimate() {
+            let moving = matches!(self.mode, Mode::Tracking | Mode::ControlledStop);
+            let same = source == Some(event.session);
+            self.carrier.seen(estimate, self.at, (moving, same), &self.params);
         }
     }
 
@@ -261,6 +275,7 @@ impl Node {
     fn command_zero(&mut self, sink: &mut impl Sink) {
         self.run.cancel_ramp();
         self.wheels = self.vehicle.zero(&self.wheels);
+        self.carrier.commanded(self.at, self.vehicle.body(&self.wheels));
         let command = self.command();
         self.emit(Body::Command(command), sink);
     }

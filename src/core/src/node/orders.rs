@@ -140,7 +140,7 @@ impl Node {
     fn admit_successor(&self, plan: &Plan, at: SpanNs) -> Result<JointStep, Refusal> {
         let nothing = Refusal::NothingToContinue { mode: self.mode };
         let in_force = self.plan.as_deref().filter(|_| self.mode == Mode::Tracking).ok_or(nothing)?;
-        if let Some(reverse) = self.law.domain().unfit_direction(plan.travel()) {
+        if let Some(reverse) = self.feedback.law().domain().unfit_direction(plan.travel()) {
             return Err(Refusal::LawDirection { reverse });
         }
         let reached = self.run.plan_time();
@@ -172,7 +172,7 @@ impl Node {
 
     fn start(&mut self, start: &Start, sink: &mut impl Sink) -> Result<(), Refusal> {
         let begin = self.pass_start_gates(start)?;
-        self.law.reset(self.vehicle.body(&self.wheels));
+        self.feedback.begin(self.vehicle.body(&self.wheels));
         self.run.begin(begin, self.at);
         let change = self.change(Trigger::Start, Cause::Operator);
         self.emit_change(change, sink);
@@ -194,7 +194,7 @@ impl Node {
         if start.start_number != self.numbers.current {
             return Err(Refusal::StartNumber);
         }
-        let domain = self.law.domain();
+        let domain = self.feedback.law().domain();
         if let Some(reverse) = domain.unfit_direction(plan.travel()) {
             return Err(Refusal::LawDirection { reverse });
         }
@@ -209,7 +209,10 @@ impl Node {
         if distance_m > self.params.start_distance_m {
             return Err(Refusal::TooFar { distance_m, limit_m: self.params.start_distance_m });
         }
-        let limit_rad = self.params.start_heading_rad.min(domain.max_heading_error_rad);
+        // One that turns on the spot realigns first.
+        let turns = self.vehicle.pivot_decel_rad_s2().is_some();
+        let bound_rad = if turns { math::PI } else { self.feedback.heading_limit_rad() };
+        let limit_rad = self.params.start_heading_rad.min(bound_rad);
         let heading_error_rad = math::wrap(estimate.pose.heading_rad - reference.pose.heading_rad);
         if heading_error_rad.abs() > limit_rad {
             return Err(Refusal::TurnedAway { heading_error_rad, limit_rad });

@@ -1,6 +1,8 @@
 //! The node's own numbers: keys of the section `node`.
 
 use crate::keys::{Bound, Key, Problem, Values};
+use crate::law::FeedbackParams;
+use crate::law::at_rest::RestGains;
 use crate::math::PI;
 use crate::time::SpanNs;
 use alloc::format;
@@ -144,23 +146,114 @@ pub const KEYS: &[Key] = &[
     Key::with_default(
         "settle_time_s",
         "s",
-        2.0,
+        10.0,
         Bound::within(0.0, 60.0),
-        "how long the law may settle on the final pose after the plan's end",
+        "how long the machine may settle on the final pose after the plan's end",
     ),
     Key::with_default(
-        "settle_speed_m_s",
-        "m/s",
-        0.002,
-        Bound::positive(1.0),
-        "the final pose is reached when the law wants less than this speed and turn rate",
+        "settle_rate_1_s",
+        "1/s",
+        2.0,
+        Bound::positive(20.0),
+        "how fast errors decay where the reference rests or turns on the spot; keep it below 0.2 / dead time",
     ),
     Key::with_default(
-        "settle_turn_rate_rad_s",
-        "rad/s",
+        "settle_distance_m",
+        "m",
         0.005,
         Bound::positive(1.0),
-        "the final pose is reached when the law wants less than this speed and turn rate",
+        "the final position is reached when it is this near; at least three of the estimator's standard deviations",
+    ),
+    Key::with_default(
+        "settle_heading_rad",
+        "rad",
+        0.005,
+        Bound::positive(1.0),
+        "the final heading is reached when it is this near; at least three of the estimator's standard deviations",
+    ),
+    Key::with_default(
+        "realign_heading_rad",
+        "rad",
+        1.4,
+        Bound::within(0.1, PI),
+        "from this heading error on (or the law's own limit) the machine turns on the spot first; one that steers stops",
+    ),
+    Key::with_default(
+        "blend_s",
+        "s",
+        0.3,
+        Bound::within(0.0, 5.0),
+        "how long a change of law, gains or regime takes; 0 lets the command step as far as the limits allow",
+    ),
+    Key::with_default(
+        "min_plan_rate",
+        "",
+        0.25,
+        Bound::within(0.05, 1.0),
+        "the slowest that the plan's time may run while the machine lags; 1 never slows it, and corners are cut",
+    ),
+    Key::with_default(
+        "slow_lag_m",
+        "m",
+        0.5,
+        Bound::positive(100.0),
+        "the lag along the path at which the plan's time begins to slow down; at twice that it runs slowest",
+    ),
+    Key::with_default(
+        "slow_lag_rad",
+        "rad",
+        0.4,
+        Bound::positive(PI),
+        "the same for the heading on a turn on the spot",
+    ),
+    Key::with_default(
+        "carry_forward",
+        "",
+        1.0,
+        Bound::within(0.0, 1.0),
+        "1: poses are carried forward to the moment at which the command acts; 0: taken as they are. Nothing else",
+    ),
+    Key::with_default(
+        "jump_distance_m",
+        "m",
+        0.15,
+        Bound::positive(100.0),
+        "a pose this far from where the commands should have brought the machine is a jump of the estimator",
+    ),
+    Key::with_default(
+        "jump_heading_rad",
+        "rad",
+        0.15,
+        Bound::positive(PI),
+        "a heading this far from where the commands should have turned the machine is a jump of the estimator",
+    ),
+    Key::with_default(
+        "jump_slew_m_s",
+        "m/s",
+        0.2,
+        Bound::positive(100.0),
+        "how fast a jump's distance is slewed in; a fast one jerks the machine",
+    ),
+    Key::with_default(
+        "jump_slew_rad_s",
+        "rad/s",
+        0.2,
+        Bound::positive(100.0),
+        "how fast a jump's heading is slewed in",
+    ),
+    Key::with_default(
+        "jump_stop_distance_m",
+        "m",
+        1.0,
+        Bound::positive(1e6),
+        "a jump farther than this stops the machine: one of the two poses was wrong",
+    ),
+    Key::with_default(
+        "jump_stop_heading_rad",
+        "rad",
+        0.8,
+        Bound::positive(PI),
+        "a jump turned farther than this stops the machine",
     ),
 ];
 
@@ -191,8 +284,21 @@ pub struct Params {
     pub controlled_stop_share: f64,
     pub protective_ramp: SpanNs,
     pub settle_time: SpanNs,
-    pub settle_speed_m_s: f64,
-    pub settle_turn_rate_rad_s: f64,
+    pub settle_rate_1_s: f64,
+    pub settle_distance_m: f64,
+    pub settle_heading_rad: f64,
+    pub realign_heading_rad: f64,
+    pub blend: SpanNs,
+    pub min_plan_rate: f64,
+    pub slow_lag_m: f64,
+    pub slow_lag_rad: f64,
+    pub carry_forward: bool,
+    pub jump_distance_m: f64,
+    pub jump_heading_rad: f64,
+    pub jump_slew_m_s: f64,
+    pub jump_slew_rad_s: f64,
+    pub jump_stop_distance_m: f64,
+    pub jump_stop_heading_rad: f64,
 }
 
 impl Params {
@@ -223,8 +329,21 @@ impl Params {
             controlled_stop_share: values.get("controlled_stop_share"),
             protective_ramp: span("protective_ramp_s"),
             settle_time: span("settle_time_s"),
-            settle_speed_m_s: values.get("settle_speed_m_s"),
-            settle_turn_rate_rad_s: values.get("settle_turn_rate_rad_s"),
+            settle_rate_1_s: values.get("settle_rate_1_s"),
+            settle_distance_m: values.get("settle_distance_m"),
+            settle_heading_rad: values.get("settle_heading_rad"),
+            realign_heading_rad: values.get("realign_heading_rad"),
+            blend: span("blend_s"),
+            min_plan_rate: values.get("min_plan_rate"),
+            slow_lag_m: values.get("slow_lag_m"),
+            slow_lag_rad: values.get("slow_lag_rad"),
+            carry_forward: values.get("carry_forward") != 0.0,
+            jump_distance_m: values.get("jump_distance_m"),
+            jump_heading_rad: values.get("jump_heading_rad"),
+            jump_slew_m_s: values.get("jump_slew_m_s"),
+            jump_slew_rad_s: values.get("jump_slew_rad_s"),
+            jump_stop_distance_m: values.get("jump_stop_distance_m"),
+            jump_stop_heading_rad: values.get("jump_stop_heading_rad"),
         };
         let mut problems = Vec::new();
         for (key, periods) in [("command_validity_s", 2.0), ("pose_timeout_s", 1.0)] {
@@ -237,7 +356,24 @@ impl Params {
                 problems.push(Problem::new(key, what));
             }
         }
+        if ![0.0, 1.0].contains(&values.get("carry_forward")) {
+            let what = format!("{} is neither 0 (no) nor 1 (yes)", values.get("carry_forward"));
+            problems.push(Problem::new("carry_forward", what));
+        }
         if problems.is_empty() { Ok(params) } else { Err(problems) }
+    }
+
+    /// The numbers of the regimes around the law.
+    pub fn feedback(&self) -> FeedbackParams {
+        FeedbackParams {
+            rest: RestGains {
+                rate_1_s: self.settle_rate_1_s,
+                distance_m: self.settle_distance_m,
+                heading_rad: self.settle_heading_rad,
+            },
+            realign_rad: self.realign_heading_rad,
+            blend: self.blend,
+        }
     }
 
     /// The tick's period, s.

@@ -1,24 +1,25 @@
 //! Following a plan: the plan's own clock, the ramps that end a run, settling on the final pose.
 
+use super::pace::{Bearing, Pace};
 use super::params::Params;
-use crate::geometry::BodyVelocity;
+use crate::geometry::TrackingError;
 use crate::math;
 use crate::plan::{Plan, Reference};
 use crate::time::{SpanNs, TimeNs};
 use crate::vehicle::{Vehicle, Wheels};
-
-/// Below this speed (m/s) and turn rate (rad/s) a reference rests, and there is nothing to brake.
-const RESTING: f64 = 1e-6;
+use trackhold_proto::journal::{TickRecord, flag};
 
 /// State of a run; everything starts anew with a start.
-#[derive(Clone, Copy, Debug, Default)]
+#[derive(Clone, Copy, Debug)]
 pub(super) struct Run {
     time: SpanNs,
     at: TimeNs,
-    /// How fast the plan's time runs.
-    rate: f64,
-    rate_change_1_s: f64,
+    pace: Pace,
     cursor: usize,
+    /// The operator's cap on the plan time's rate; it outlasts the run.
+    cap: f64,
+    /// True until the first tick of the run has passed.
+    fresh: bool,
     /// The law has no more say: zero is wanted until the machine rests.
     pub(super) coming_to_rest: bool,
     /// Settling took longer than allowed.
@@ -33,10 +34,32 @@ struct Ramp {
     wheels: Wheels,
 }
 
+impl Default for Run {
+    fn default() -> Self {
+        Self {
+            time: SpanNs(0),
+            at: TimeNs(0),
+            pace: Pace::LITERAL,
+            cursor: 0,
+            cap: 1.0,
+            fresh: true,
+            coming_to_rest: false,
+            settled_late: false,
+            ramp: None,
+        }
+    }
+}
+
 impl Run {
     /// Begins at a plan time.
     pub(super) fn begin(&mut self, time: SpanNs, at: TimeNs) {
-        *self = Self { time, at, rate: 1.0, ..Self::default() };
+        let cap = self.cap;
+        *self = Self { time, at, cap, pace: Pace { rate: cap, change_1_s: 0.0 }, ..Self::default() };
+    }
+
+    /// The operator's cap on the plan time's rate.
+    pub(super) fn cap(&self) -> f64 {
+        self.cap
     }
 
     /// Goes on with another plan on the same clock.
@@ -59,7 +82,7 @@ impl Run {
     }
 
     pub(super) fn rate(&self) -> f64 {
-        self.rate
+        self.pace.rate
     }
 
     /// Lets the plan's time run up to `at`. Whole nanoseconds: at rate 1 no rounding adds up over hours.
@@ -67,46 +90,54 @@ impl Run {
         let elapsed = at.since(self.at);
         self.at = at;
         self.time = self.time
-            + if self.rate == 1.0 {
+            + if self.pace.rate == 1.0 {
                 elapsed
             } else {
-                SpanNs(math::round(elapsed.0 as f64 * self.rate) as u64)
+                SpanNs(math::round(elapsed.0 as f64 * self.pace.rate) as u64)
             };
     }
 
-    /// Slows the plan's time so that the reference brakes along its path with a share of the machine's deceleration.
-    pub(super) fn ramp_down(&mut self, plan: &Plan, vehicle: &dyn Vehicle, share: f64, seconds: f64) {
-        let reference = plan.at(self.place_s(plan), &mut self.cursor);
-        let (speed, turn_rate) =
-            (reference.velocity.speed_m_s.abs(), reference.velocity.turn_rate_rad_s.abs());
-        self.rate_change_1_s = if speed > RESTING {
-            -share * vehicle.path_decel_m_s2(reference.curvature_1_m) / speed
-        } else if turn_rate > RESTING {
-            -share * vehicle.pivot_decel_rad_s2().unwrap_or(f64::INFINITY) / turn_rate
+    /// The reference at the plan's time, its time running at rate 1.
+    pub(super) fn literal(&mut self, plan: &Plan) -> Reference {
+        plan.at(self.place_s(plan), &mut self.cursor)
+    }
+
+    /// Sets the pace of a tick and returns the reference at it. `stopping`: on a controlled stop's ramp; `holding`: the
+    /// machine realigns.
+    pub(super) fn pace(
+        &mut self,
+        bearing: &Bearing<'_>,
+        error: &TrackingError,
+        (stopping, holding): (bool, bool),
+        record: &mut TickRecord,
+    ) -> Reference {
+        let params = bearing.params;
+        if stopping {
+            self.pace = self.pace.ramp_down(bearing);
+            self.coming_to_rest |= self.pace.rate == 0.0;
+        } else if holding && params.min_plan_rate < 1.0 {
+            let rate = if self.fresh { 0.0 } else { self.pace.rate };
+            self.pace = Pace { rate, ..self.pace }.towards(0.0, bearing);
         } else {
-            f64::NEG_INFINITY
-        };
-        self.rate = (self.rate + self.rate_change_1_s * seconds).max(0.0);
-        if self.rate == 0.0 {
-            self.rate_change_1_s = 0.0;
-            self.coming_to_rest = true;
+            let allowed = bearing.allowed_by_lag(error);
+            record.flags |= if allowed < 1.0 { flag::PLAN_SLOWED } else { 0 };
+            self.pace = self.pace.towards(allowed.min(self.cap), bearing);
+        }
+        self.fresh = false;
+        let Pace { rate, change_1_s } = self.pace;
+        if rate == 1.0 && change_1_s == 0.0 {
+            *bearing.literal
+        } else {
+            bearing.literal.slowed(rate, change_1_s)
         }
     }
 
-    /// The reference at the plan's time.
-    pub(super) fn reference(&mut self, plan: &Plan) -> Reference {
-        let reference = plan.at(self.place_s(plan), &mut self.cursor);
-        if self.rate == 1.0 { reference } else { reference.slowed(self.rate, self.rate_change_1_s) }
-    }
-
-    /// After the plan's end: decides whether what the law still wants is worth moving for.
-    pub(super) fn settle(&mut self, wanted: BodyVelocity, since_end: SpanNs, params: &Params) {
-        let small = wanted.speed_m_s.abs() < params.settle_speed_m_s
-            && wanted.turn_rate_rad_s.abs() < params.settle_turn_rate_rad_s;
+    /// After the plan's end: the run is over once the machine has settled, or may not settle any longer.
+    pub(super) fn settle(&mut self, settled: bool, since_end: SpanNs, params: &Params) {
         let late = since_end >= params.settle_time;
-        if !self.coming_to_rest && (small || late) {
+        if !self.coming_to_rest && (settled || late) {
             self.coming_to_rest = true;
-            self.settled_late = !small;
+            self.settled_late = !settled;
         }
     }
 

@@ -2,14 +2,15 @@
 
 use super::ahead::PlanAhead;
 use super::mode::Trigger;
+use super::pace::Bearing;
 use super::{Node, Sink};
-use crate::geometry::{BodyVelocity, Pose};
+use crate::geometry::{BodyVelocity, Pose, TrackingError};
 use crate::law::Input;
 use crate::plan::Reference;
 use crate::time::{SpanNs, TimeNs};
-use crate::vehicle::limit;
+use crate::vehicle::{Limited, limit};
 use trackhold_proto::journal::{Body, ModeChange, TickRecord, flag};
-use trackhold_proto::words::{Cause, Mode};
+use trackhold_proto::words::{Cause, Mode, Regime};
 
 impl Node {
     pub(super) fn tick(&mut self, sink: &mut impl Sink) {
@@ -17,7 +18,7 @@ impl Node {
         let seconds = self.step_seconds(at);
         let mut record = TickRecord::blank(self.vehicle.layout());
         record.flags = self.poses.take_warnings();
-        let pose = self.see_pose(at, &mut record);
+        let pose = self.see_pose(at, seconds, &mut record);
         let (mut change, mut taken_over) = (None, false);
         match self.mode {
             Mode::Standby | Mode::EmergencyStop => self.wheels = self.vehicle.zero(&self.wheels),
@@ -35,7 +36,9 @@ impl Node {
         record.start_number = self.numbers.current;
         record.plan_time_ns = self.run.plan_time().0;
         record.plan_rate = self.run.rate();
+        record.speed_cap = self.run.cap();
         record.command = self.command();
+        self.carrier.commanded(at, self.vehicle.body(&self.wheels));
         self.ticks += 1;
         self.last_tick = Some(at);
         self.emit(Body::Tick(record), sink);
@@ -65,12 +68,13 @@ impl Node {
     }
 
     /// Notes the pose in the record, and returns it if it is fresh.
-    fn see_pose(&self, at: TimeNs, record: &mut TickRecord) -> Option<Pose> {
+    fn see_pose(&mut self, at: TimeNs, seconds: f64, record: &mut TickRecord) -> Option<Pose> {
         let Some(estimate) = self.poses.estimate() else {
             record.flags |= flag::POSE_STALE;
             return None;
         };
-        let pose = estimate.pose;
+        let pose = self.carrier.at(at, estimate.pose, seconds, &self.params);
+        record.flags |= if self.carrier.is_slewing() { flag::POSE_SLEWED } else { 0 };
         (record.x_m, record.y_m, record.heading_rad) = (pose.x_m, pose.y_m, pose.heading_rad);
         record.pose_age_ns = estimate.age(at).0;
         record.clock_offset_ns = estimate.clock_offset_ns;
@@ -90,64 +94,60 @@ impl Node {
         record: &mut TickRecord,
     ) -> Option<ModeChange> {
         let Some(pose) = pose else { return self.guard_protective(at, Cause::StalePose) };
-        let Some(reference) = self.next_reference(seconds) else {
-            unreachable!("a start needs a plan, and none is taken away while one is followed")
-        };
-        match self.control(reference, pose, seconds, record) {
+        if self.carrier.take_too_great(&self.params).is_some() {
+            return self.guard_protective(at, Cause::PoseJump);
+        }
+        match self.control(at, pose, seconds, record) {
             Ok(body) => self.end_of_run(body, record),
             Err(cause) => self.guard_protective(at, cause),
         }
     }
 
-    /// Asks the law and applies the limits; the body velocity that the new command amounts to, or why the machine has to
-    /// stop.
+    /// Chooses the regime, asks its feedback and applies the limits; the body velocity that the new command amounts to, or
+    /// why the machine has to stop.
     fn control(
         &mut self,
-        reference: Reference,
+        at: TimeNs,
         pose: Pose,
         seconds: f64,
         record: &mut TickRecord,
     ) -> Result<BodyVelocity, Cause> {
         let since_end = self.past_end().filter(|_| self.mode == Mode::Tracking);
-        let Self { plan: Some(plan), successors, run, vehicle, law, params, wheels, .. } = self else {
-            unreachable!("the reference came from a plan")
+        let Self { plan: Some(plan), successors, run, feedback, vehicle, params, wheels, mode, .. } = self
+        else {
+            unreachable!("a start needs a plan, and none is taken away while one is followed")
         };
+        let literal = run.literal(plan);
+        let error = TrackingError::between(pose, literal.pose, literal.direction);
+        record.regime = feedback.choose(literal.velocity, error.heading_rad);
+        let holding = record.regime == Regime::Realigning;
+        let bearing = Bearing { literal: &literal, vehicle: &**vehicle, params, seconds };
+        let reference = run.pace(&bearing, &error, (*mode == Mode::ControlledStop, holding), record);
         let ahead = PlanAhead::new(plan, successors, run);
         let input = Input::new(reference, &ahead, pose, (*wheels, vehicle.body(wheels)), seconds);
         fill_reference(record, &input);
-        if input.error.heading_rad.abs() > law.domain().max_heading_error_rad {
+        let Ok(mut wanted) = feedback.control(at, &input) else {
             record.flags |= flag::OUTSIDE_LAW_DOMAIN;
             return Err(Cause::OutsideLawDomain);
-        }
-        let mut wanted = if run.coming_to_rest { BodyVelocity::ZERO } else { law.control(&input).velocity };
+        };
+        record.flags |= if wanted.fallback { flag::LAW_FALLBACK } else { 0 };
         if let Some(since_end) = since_end {
             record.flags |= flag::SETTLING;
-            run.settle(wanted, since_end, params);
+            run.settle(feedback.is_settled(), since_end, params);
         }
         if run.coming_to_rest {
-            wanted = BodyVelocity::ZERO;
+            wanted = BodyVelocity::ZERO.into();
         }
+        let wanted = wanted.velocity;
         if !wanted.is_finite() {
             record.flags |= flag::LAW_NOT_FINITE;
             return Err(Cause::LawNotFinite);
         }
-        record.wanted_speed_m_s = wanted.speed_m_s;
-        record.wanted_turn_rate_rad_s = wanted.turn_rate_rad_s;
         let limited = limit(&**vehicle, wanted, reference.curvature_1_m, wheels, seconds);
-        law.settle(&input, limited.speed_limited || limited.step_limited, params.period_s());
-        record.flags |= if limited.speed_limited { flag::SPEED_LIMITED } else { 0 };
-        record.flags |= if limited.step_limited { flag::STEP_LIMITED } else { 0 };
+        feedback.settle(&input, limited.speed_limited || limited.step_limited, params.period_s());
         *wheels = limited.wheels;
+        fill_wanted(record, wanted, &limited);
         Ok(limited.body)
-    }
-
-    /// The reference of this tick; a controlled stop slows the plan's time first.
-    fn next_reference(&mut self, seconds: f64) -> Option<Reference> {
-        let plan = self.plan.as_deref()?;
-        if self.mode == Mode::ControlledStop {
-            self.run.ramp_down(plan, &*self.vehicle, self.params.controlled_stop_share, seconds);
-        }
-        Some(self.run.reference(plan))
     }
 
     /// How long ago a closed plan ended.
@@ -191,7 +191,7 @@ impl Node {
     }
 }
 
-fn fill_reference(record: &mut TickRecord, input: &Input) {
+fn fill_reference(record: &mut TickRecord, input: &Input<'_>) {
     let Reference { pose, velocity, .. } = input.reference;
     record.flags |= flag::HAS_REFERENCE;
     (record.ref_x_m, record.ref_y_m, record.ref_heading_rad) = (pose.x_m, pose.y_m, pose.heading_rad);
@@ -202,4 +202,11 @@ fn fill_reference(record: &mut TickRecord, input: &Input) {
     record.along_error_m = input.error.along_m;
     record.cross_error_m = input.error.cross_m;
     record.heading_error_rad = input.error.heading_rad;
+}
+
+fn fill_wanted(record: &mut TickRecord, wanted: BodyVelocity, limited: &Limited) {
+    record.wanted_speed_m_s = wanted.speed_m_s;
+    record.wanted_turn_rate_rad_s = wanted.turn_rate_rad_s;
+    record.flags |= if limited.speed_limited { flag::SPEED_LIMITED } else { 0 };
+    record.flags |= if limited.step_limited { flag::STEP_LIMITED } else { 0 };
 }

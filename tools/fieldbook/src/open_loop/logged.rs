@@ -13,7 +13,7 @@ use trackhold_core::geometry::Pose;
 use trackhold_core::law::OnPlan;
 use trackhold_core::plan::{self, Plan};
 use trackhold_core::settings::Settings;
-use trackhold_core::time::SpanNs;
+use trackhold_core::time::{SpanNs, TimeNs};
 use trackhold_proto::blob::Digest;
 use trackhold_proto::journal::{Body, Boot, Entry, PlanEvent, TickRecord, flag};
 use trackhold_proto::words::Mode;
@@ -174,6 +174,7 @@ impl Logged {
         };
         let place = SpanNs(record.plan_time_ns) - plan.begin();
         let mut reference = plan.at(place.seconds(), &mut self.cursor);
+        let literal = reference.velocity;
         if record.plan_rate != 1.0 {
             let change = rate_before.map_or(0.0, |before| (record.plan_rate - before) / seconds.max(1e-9));
             reference = reference.slowed(record.plan_rate, change);
@@ -188,6 +189,8 @@ impl Logged {
         let pose = Pose::new(record.x_m, record.y_m, record.heading_rad);
         let ahead = OnPlan { plan, t_s: place.seconds(), rate: record.plan_rate };
         let answer = self.asked.ask(&Question {
+            at: TimeNs(record.at_ns),
+            literal,
             reference,
             ahead,
             pose,

@@ -103,7 +103,7 @@ fn a_run_can_be_cut_short_and_a_far_start_is_refused() {
 #[test]
 fn a_guard_that_stops_the_run_is_named() {
     let (code, out, error) =
-        simulate("samson-unicycle", &["--start=0.3,0.2,0.35", "--gain", "k_3=0.01", "--gain", "k_2=900"]);
+        simulate("samson-car", &["--start=5.3,-3.1,2.9", "--gain", "k_3=0.01", "--gain", "k_2=900"]);
     assert_eq!(code, 0, "{error}");
     assert!(out.contains("stopped by a guard: protective-stop (outside-law-domain)"), "{out}");
 }
