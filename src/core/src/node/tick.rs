@@ -133,7 +133,7 @@ impl Node {
         }
         record.wanted_speed_m_s = wanted.speed_m_s;
         record.wanted_turn_rate_rad_s = wanted.turn_rate_rad_s;
-        let limited = limit(&**vehicle, wanted, reference.curvature_1_m, wheels, seconds);
+        let limited = limit(&**vehicle, wanted, reference.rest_curvature_1_m, wheels, seconds);
         law.settle(&input, limited.speed_limited || limited.step_limited, params.period_s());
         record.flags |= if limited.speed_limited { flag::SPEED_LIMITED } else { 0 };
         record.flags |= if limited.step_limited { flag::STEP_LIMITED } else { 0 };

@@ -149,6 +149,7 @@ impl<G: Geometry> Stretch for Path<G> {
                 turn_rate_rad_s: bend.turn_1_m * progress.rate,
             },
             curvature_1_m: self.sign * bend.turn_1_m,
+            rest_curvature_1_m: self.sign * bend.turn_1_m,
             curvature_rate_1_m2: self.sign * bend.turn_rate_1_m2,
             accel_m_s2: self.sign * progress.accel,
             turn_accel_rad_s2: bend.turn_1_m * progress.accel
