@@ -9,6 +9,7 @@
 //! | `finding` | what is found, in words |
 //! | `walk` | looks at a plan, dense and bounded: the step rule |
 //! | `steps` | what jumps between two looks |
+//! | `steering` | whether rests are long enough for the steering |
 //! | `inspect` | judges look by look |
 //! | `sideways` | way-poses against their headings |
 //! | `ledger` | the worst place of each fault in a segment |
@@ -17,6 +18,7 @@ mod finding;
 mod inspect;
 mod ledger;
 mod sideways;
+mod steering;
 mod steps;
 mod thresholds;
 mod walk;
