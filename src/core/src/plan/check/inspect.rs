@@ -237,13 +237,15 @@ impl<'a> Inspector<'a> {
             return;
         }
         let Some(needed_s) = self.vehicle.swing_s(swing.before_1_m, swing.after_1_m) else { return };
-        let late_s = needed_s - swing.rest_s;
+        let rest_s = swing.rest_s(self.plan);
+        let late_s = needed_s - rest_s;
         if late_s > SHORTEST_S {
-            self.steering_late(&swing, needed_s, late_s, step_1_m);
+            self.steering_late(&swing, (needed_s, rest_s), step_1_m);
         }
     }
 
-    fn steering_late(&mut self, swing: &Swing, needed_s: f64, late_s: f64, step_1_m: f64) {
+    fn steering_late(&mut self, swing: &Swing, (needed_s, rest_s): (f64, f64), step_1_m: f64) {
+        let late_s = needed_s - rest_s;
         let way = swing.way(self.plan, late_s);
         let (meaning, off, limit) = if swing.after_1_m.is_infinite() {
             (Meaning::SpotLate { late_s, off_rad: way }, way, self.thresholds.joint_heading_rad)
@@ -254,7 +256,7 @@ impl<'a> Inspector<'a> {
         };
         let is_unfit = off > limit && !swing.is_first;
         let severity = if is_unfit { Severity::Unfit } else { Severity::Warning };
-        self.note(Fault::SteeringTime, severity, &swing.begin, (needed_s, swing.rest_s, "s"), meaning);
+        self.note(Fault::SteeringTime, severity, &swing.begin, (needed_s, rest_s, "s"), meaning);
     }
 
     fn is_sampled(&self, look: &Look) -> bool {

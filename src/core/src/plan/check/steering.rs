@@ -6,7 +6,9 @@ use super::steps;
 use super::walk::Look;
 
 /// Slower than this the wheels have all their time for the steering, m/s.
-const STANDS_M_S: f64 = 1e-3;
+const STANDS_M_S: f64 = 1e-6;
+/// An interval between two looks that is halved so often is a nanosecond.
+const HALVINGS: usize = 30;
 
 /// What the steering has to do between two motions.
 #[derive(Clone, Copy, Debug)]
@@ -15,8 +17,8 @@ pub(super) struct Swing {
     pub(super) before_1_m: f64,
     /// What it has to be steered for, 1/m; ±∞ on the spot.
     pub(super) after_1_m: f64,
-    /// How long the reference rests between, s.
-    pub(super) rest_s: f64,
+    /// When the reference stands between, if it does.
+    stands: Option<Stand>,
     /// Where the later motion begins.
     pub(super) begin: Look,
     /// True at the beginning of a plan, where straight ahead is only the likely angle.
@@ -29,6 +31,11 @@ impl Swing {
         self.before_1_m.is_finite() != self.after_1_m.is_finite()
     }
 
+    /// How long the reference rests between, s.
+    pub(super) fn rest_s(&self, plan: &Plan) -> f64 {
+        self.stands.map_or(0.0, |stand| stand.seconds(plan))
+    }
+
     /// How far the reference gets in its first `seconds`, m or rad; no farther than the segment's end.
     pub(super) fn way(&self, plan: &Plan, seconds: f64) -> f64 {
         let slot = &plan.slots[self.begin.slot];
@@ -38,6 +45,40 @@ impl Swing {
     }
 }
 
+/// A time in which the reference stands, from look to look.
+#[derive(Clone, Copy, Debug)]
+struct Stand {
+    from: Look,
+    to: Look,
+    /// The look before and the one after, where it still moves and moves again within the segment.
+    before: Option<Look>,
+    after: Option<Look>,
+}
+
+impl Stand {
+    /// How long it stands, its ends narrowed down between the looks.
+    fn seconds(&self, plan: &Plan) -> f64 {
+        edge(plan, self.after, &self.to) - edge(plan, self.before, &self.from)
+    }
+}
+
+fn stands(look: &Look) -> bool {
+    look.reference.velocity.speed_m_s.abs() <= STANDS_M_S && !steps::on_the_spot(look)
+}
+
+/// The instant between two looks at which the one motion ends, or the other begins.
+fn edge(plan: &Plan, moving: Option<Look>, standing: &Look) -> f64 {
+    let mut stands_s = standing.t_s;
+    let Some(moving) = moving.filter(|moving| moving.slot == standing.slot) else { return stands_s };
+    let (slot, mut moves_s) = (&plan.slots[standing.slot], moving.t_s);
+    for _ in 0..HALVINGS {
+        let t_s = 0.5 * (stands_s + moves_s);
+        let middle = Look { t_s, reference: slot.at(t_s - slot.begin_s), ..moving };
+        *(if stands(&middle) { &mut stands_s } else { &mut moves_s }) = t_s;
+    }
+    stands_s
+}
+
 /// Goes from look to look.
 #[derive(Clone, Copy, Debug, Default)]
 pub(super) struct Steering {
@@ -45,8 +86,9 @@ pub(super) struct Steering {
     held: Option<(f64, usize)>,
     /// The last look at the rest at hand.
     rest: Option<Look>,
-    /// When the reference stands in it, s of plan time: from, to.
-    stands: Option<(f64, f64)>,
+    /// When the reference stands in it.
+    stands: Option<Stand>,
+    previous: Option<Look>,
 }
 
 impl Steering {
@@ -54,11 +96,15 @@ impl Steering {
     /// near rest the curvature is noise.
     pub(super) fn next(&mut self, look: &Look, rest_speed_m_s: f64, sampled: bool) -> Option<Swing> {
         let on_the_spot = steps::on_the_spot(look);
+        let previous = self.previous.replace(*look);
         if !on_the_spot && look.reference.velocity.speed_m_s.abs() <= rest_speed_m_s {
-            self.rests(look, sampled);
+            self.rests(look, previous, sampled);
             return None;
         }
-        let (rest, stands, held) = (self.rest.take(), self.stands.take(), self.held);
+        let (rest, mut stands, held) = (self.rest.take(), self.stands.take(), self.held);
+        if let Some(stand) = stands.as_mut().filter(|_| !sampled) {
+            stand.after.get_or_insert(*look);
+        }
         // A path that begins at rest is steered for its own beginning.
         let own = rest.filter(|last| last.slot == look.slot && !sampled);
         let begin = own.unwrap_or(*look);
@@ -70,7 +116,7 @@ impl Steering {
         let swing = Swing {
             before_1_m: held.map_or(0.0, |(curvature, _)| curvature),
             after_1_m: if on_the_spot { steered_for(look) } else { steered_for(&begin) },
-            rest_s: stands.map_or(0.0, |(from_s, to_s)| to_s - from_s),
+            stands,
             begin,
             is_first: held.is_none(),
         };
@@ -79,7 +125,7 @@ impl Steering {
         is_one.then_some(swing)
     }
 
-    fn rests(&mut self, look: &Look, sampled: bool) {
+    fn rests(&mut self, look: &Look, previous: Option<Look>, sampled: bool) {
         // A path that ends at rest is steered for its own end.
         if self.rest.is_none()
             && !sampled
@@ -90,9 +136,15 @@ impl Steering {
             *held_1_m = look.reference.curvature_1_m;
         }
         self.rest = Some(*look);
-        if sampled || look.reference.velocity.speed_m_s.abs() <= STANDS_M_S {
-            let from_s = self.stands.map_or(look.t_s, |(from_s, _)| from_s);
-            self.stands = Some((from_s, look.t_s));
+        let stands = sampled || stands(look);
+        match &mut self.stands {
+            Some(stand) if stands => (stand.to, stand.after) = (*look, None),
+            Some(stand) => _ = stand.after.get_or_insert(*look),
+            None if stands => {
+                let before = previous.filter(|_| !sampled);
+                self.stands = Some(Stand { from: *look, to: *look, before, after: None });
+            }
+            None => {}
         }
     }
 }
