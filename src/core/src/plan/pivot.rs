@@ -99,7 +99,7 @@ impl Stretch for Pivot {
         Travel::default()
     }
 
-    fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64 {
+    fn brake_decel(&self, vehicle: &dyn Vehicle, _exit: f64) -> f64 {
         // A machine that cannot pivot has no plan with one: `first_excess`, or the check, refuses it.
         vehicle.pivot_decel_rad_s2().unwrap_or(AT_ONCE_RAD_S2)
     }
@@ -150,7 +150,7 @@ impl Stretch for Dwell {
         self.rest.rest_curvature_1_m = next.rest_curvature_1_m;
     }
 
-    fn brake_decel(&self, _vehicle: &dyn Vehicle) -> f64 {
+    fn brake_decel(&self, _vehicle: &dyn Vehicle, _exit: f64) -> f64 {
         f64::INFINITY
     }
 

@@ -389,11 +389,12 @@ impl Stretch for Samples {
         travel
     }
 
-    fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64 {
+    fn brake_decel(&self, vehicle: &dyn Vehicle, _exit: f64) -> f64 {
         let last = self.points.len() - 2;
         if self.piece(last).on_the_spot {
             return vehicle.pivot_decel_rad_s2().unwrap_or(super::pivot::AT_ONCE_RAD_S2);
         }
+        // What a changing curvature adds is not taken into account: between way-poses its rate is mostly noise.
         // Only the bends that a stop from the end's speed could reach count; twice that distance is safely all of them.
         let exit = self.points[last + 1].speed_m_s;
         let reach = exit * exit / vehicle.path_decel_m_s2(0.0);

@@ -71,8 +71,8 @@ pub trait Stretch: Debug + Send + Sync {
         Vec::new()
     }
 
-    /// The deceleration with which this machine can brake anywhere on it, m/s² (rad/s²).
-    fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64;
+    /// The deceleration with which this machine can brake on it down to the rate `exit` at its end, m/s² (rad/s²).
+    fn brake_decel(&self, vehicle: &dyn Vehicle, exit: f64) -> f64;
 
     /// The last instant at which the literal timing is no faster than a braking curve that ends the stretch at the rate
     /// `exit` with the deceleration `decel`; none if it is faster everywhere.

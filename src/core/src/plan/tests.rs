@@ -9,6 +9,7 @@ use alloc::format;
 use alloc::sync::Arc;
 use alloc::vec::Vec;
 
+mod braking;
 mod curves;
 mod timing;
 
