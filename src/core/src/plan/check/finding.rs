@@ -158,7 +158,7 @@ impl Fault {
             Self::Limit(_) => "slow down or turn wider",
             Self::LawDirection => "choose another law, or the other sign of law.gains.x_p_m",
             Self::LawAtRest => {
-                "nothing, unless the machine drifts there; off-axle keeps its feedback at rest"
+                "nothing to mend, unless the machine drifts there; off-axle keeps its feedback at rest"
             }
         }
     }
@@ -264,8 +264,8 @@ impl Finding {
             }
             Some((value, limit)) => {
                 let bound = match (self.severity, self.fault) {
-                    (Severity::Information, _) | (_, Fault::Pivot | Fault::LawDirection) => String::new(),
                     (_, Fault::SteeringTime) => format!(", the rest there lasts {} s", Number(limit)),
+                    (Severity::Information, _) | (_, Fault::Pivot | Fault::LawDirection) => String::new(),
                     (_, Fault::Limit(_)) => {
                         format!(", the limit is {}{}", Number(limit), Unit(self.unit))
                     }

@@ -255,7 +255,11 @@ impl<'a> Inspector<'a> {
             (Meaning::SteeringLate { late_s, way_m: way, off_rad }, off_rad, self.thresholds.steering_off_rad)
         };
         let is_unfit = off > limit && !swing.is_first;
-        let severity = if is_unfit { Severity::Unfit } else { Severity::Warning };
+        let severity = match is_unfit {
+            true => Severity::Unfit,
+            false if late_s > self.thresholds.excess_s => Severity::Warning,
+            false => Severity::Information,
+        };
         self.note(Fault::SteeringTime, severity, &swing.begin, (needed_s, rest_s, "s"), meaning);
     }
 

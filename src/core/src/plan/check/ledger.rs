@@ -180,7 +180,8 @@ const fn plain(draft: &Draft) -> &'static str {
         (Fault::Sideways, _) => {
             "wheels roll along the heading only; the path that would be driven is not the one stated"
         }
-        (Fault::Cusp, _) => "the direction of travel changes at rest",
+        // Its line has told that it changes at rest.
+        (Fault::Cusp, _) => "",
         (Fault::Pivot, _) => "a machine that steers cannot turn on the spot",
         (Fault::LawDirection, _) => "the law's point would turn the machine round",
         _ => "",

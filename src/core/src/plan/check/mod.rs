@@ -229,9 +229,10 @@ fn note_stillness(inspector: &mut Inspector<'_>, plan: &Plan, terms: &Terms) {
         places,
         value: None,
         unit: "",
-        meaning: format!(
-            "the law does not correct the heading while the reference rests or turns on the spot, here and in {places} segments in all"
-        ),
+        meaning: match places {
+            1 => String::from("this segment is the only such one"),
+            _ => format!("this is the first of {places} such segments"),
+        },
         remedy: Fault::LawAtRest.remedy(),
     });
 }

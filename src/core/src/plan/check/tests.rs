@@ -153,6 +153,10 @@ fn a_path_that_begins_unsteered_is_a_warning_and_unfit_where_it_strays() {
     let fast = report(&arcs(1.4, ""), &car());
     assert!(!fast.is_fit() && found(&fast, "steering-time").severity == Severity::Warning, "the beginning");
     assert_eq!(fast.findings.iter().filter(|one| one.severity == Severity::Unfit).count(), 1);
+    let hardly = report(&arcs(0.5, r#"{"kind":"dwell","duration_s":1.08},"#), &car());
+    let late = hardly.findings.iter().rfind(|one| one.fault == Fault::SteeringTime).unwrap();
+    assert_eq!(late.severity, Severity::Information, "0.09 s: {late:?}");
+    assert!(late.line().contains("the rest there lasts 1.08 s"), "{}", late.line());
     let rested = report(&arcs(1.4, r#"{"kind":"dwell","duration_s":1.2},"#), &car());
     let late = rested.findings.iter().filter(|one| one.fault == Fault::SteeringTime);
     assert_eq!(late.map(|one| one.at().unwrap().segment).collect::<Vec<_>>(), [0], "{:#?}", rested.findings);

@@ -83,7 +83,8 @@ pub const KEYS: &[Key] = &[
         "s",
         0.1,
         Bound::within(0.0, 10.0),
-        "an acceleration or steering rate beyond its limit for no longer than this is a warning, for longer it is unfit",
+        "an acceleration or steering rate beyond its limit for no longer than this is a warning, for longer it is unfit; \
+         steering that is late by no more than this is for information",
     ),
     Key::with_default(
         "max_samples",
