@@ -12,7 +12,7 @@ use std::path::PathBuf;
 use std::process::ExitCode;
 use trackhold::site::Site;
 use trackhold_core::plan::check::{Report, Severity, Terms, check};
-use trackhold_core::plan::retime::{Options, Retimed, StepRule, of_plan};
+use trackhold_core::plan::retime::{Dwell, Options, Retimed, StepRule, of_plan};
 use trackhold_core::plan::{Placed, Plan};
 
 /// What the help says below the options.
@@ -23,7 +23,8 @@ rate, lateral acceleration, jerk. A limit that the site file does not give is no
 
 The plan rests at cusps, pivots and dwells, and on a steered machine where the curvature steps by more than \
 check.curvature_step_1_m. A machine that can turn in place passes a curvature step at the speed at which the step of its \
-wheel speeds takes check.excess_s within the limits.
+wheel speeds takes check.excess_s within the limits. Where the steering has to swing, from straight ahead at the beginning \
+too, it rests until the steering is there: a dwell is put in or made longer.
 
 A segment of samples becomes a spline through its way-poses, since samples have a time at every point; how far the two \
 paths lie apart is told.
@@ -101,7 +102,7 @@ pub fn run(args: &Args) -> anyhow::Result<ExitCode> {
         Ok(found) => found,
         Err(findings) => return refuse(&name, &findings),
     };
-    let fresh = document.timed(&found.timings);
+    let fresh = document.timed(&found);
     let report = check(fresh.as_bytes(), &terms);
     std::fs::write(&args.out, &fresh).with_context(|| format!("cannot write {}", args.out.display()))?;
     tell(args, &terms, &report, &found, old.as_ref(), &mut told)?;
@@ -163,6 +164,19 @@ fn refuse(name: &str, findings: &[String]) -> anyhow::Result<ExitCode> {
     Ok(ExitCode::from(NO_TIMING))
 }
 
+/// Segments are counted as in the plan that was given.
+fn tell_dwells(found: &Retimed, told: &mut String) -> std::fmt::Result {
+    for Dwell { segment, at_m, duration_s, longer } in &found.dwells {
+        let what = match longer {
+            Some(index) => format!("the dwell segments[{index}] lasts {duration_s:.3} s longer"),
+            None if *at_m > 0.0 => format!("{duration_s:.3} s of it at {at_m:.3} m of segments[{segment}]"),
+            None => format!("a dwell of {duration_s:.3} s is put in before segments[{segment}]"),
+        };
+        writeln!(told, "the steering takes time: {what}")?;
+    }
+    Ok(())
+}
+
 fn tell(
     args: &Args,
     terms: &Terms,
@@ -190,6 +204,7 @@ fn tell(
             )?,
         }
     }
+    tell_dwells(found, told)?;
     let new_s = plan.duration_s();
     match old {
         Some(old) => writeln!(told, "duration   {new_s:.3} s, before {:.3} s", old.duration_s())?,

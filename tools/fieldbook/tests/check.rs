@@ -91,23 +91,44 @@ fn every_finding_of_the_corpus_says_what_would_mend_it() {
     }
 }
 
+/// The plans that a site file says it fits, in the comment at its head.
+fn plans_that_fit(site: &Path) -> Vec<String> {
+    let text = std::fs::read_to_string(site).unwrap();
+    let head: String = text.lines().take_while(|line| line.starts_with('#')).collect();
+    let words = head.split(|letter: char| letter.is_whitespace() || letter == ',' || letter == '#');
+    let names = words.map(|word| word.trim_end_matches('.')).filter(|word| word.starts_with("plans/"));
+    names.map(str::to_owned).collect()
+}
+
+fn assert_fit(site: &Path, plan: &Path) {
+    let terms = Site::load(site).unwrap().checked().unwrap().terms();
+    let report = check(&std::fs::read(plan).unwrap(), &terms);
+    let told: Vec<String> = report.findings.iter().map(Finding::line).collect();
+    assert!(report.is_fit(), "{} on {}: {told:#?}", plan.display(), site.display());
+}
+
 #[test]
-fn ready_plans_are_fit_on_their_sites() {
-    for (site, plan) in [
-        ("config/unicycle.toml", "config/plans/yard-loop.json"),
-        ("config/differential.toml", "config/plans/yard-loop.json"),
-        ("config/car.toml", "config/plans/delivery-run.json"),
-        ("config/car.toml", "config/plans/lane-change.json"),
-        ("config/differential.toml", "config/plans/nurbs-aisle.json"),
-        ("config/differential.toml", "config/plans/spline-dock.json"),
-        ("tools/fieldbook/src/demo/site.toml", "tools/fieldbook/src/demo/plan.json"),
-        ("tools/fieldbook/src/demo/site.toml", "tools/fieldbook/src/demo/plan-short.json"),
-    ] {
-        let site = Site::load(&root().join(site)).unwrap();
-        let report = check(&std::fs::read(root().join(plan)).unwrap(), &site.checked().unwrap().terms());
-        let told: Vec<String> = report.findings.iter().map(Finding::line).collect();
-        assert!(report.is_fit(), "{plan}: {told:#?}");
+fn every_ready_plan_is_fit_on_the_sites_that_say_so() {
+    let config = root().join("config");
+    let files = |folder: &Path, kind: &str| {
+        let entries = std::fs::read_dir(folder).unwrap().map(|entry| entry.unwrap().path());
+        entries.filter(|path| path.extension().is_some_and(|end| end == kind)).collect::<Vec<_>>()
+    };
+    let mut said = Vec::new();
+    for site in files(&config, "toml") {
+        let plans = plans_that_fit(&site);
+        assert!(!plans.is_empty(), "{} says no plan that fits", site.display());
+        plans.iter().for_each(|plan| assert_fit(&site, &config.join(plan)));
+        said.extend(plans);
     }
+    for plan in files(&config.join("plans"), "json") {
+        let name = format!("plans/{}", plan.file_name().unwrap().to_string_lossy());
+        assert!(said.contains(&name), "no site file says that {name} fits it");
+    }
+    let demo = root().join("tools/fieldbook/src/demo");
+    ["plan.json", "plan-short.json"]
+        .iter()
+        .for_each(|plan| assert_fit(&demo.join("site.toml"), &demo.join(plan)));
 }
 
 fn run(site: &str, plan: &str, args: &[&str]) -> (i32, String, String) {

@@ -143,7 +143,7 @@ impl Node {
             record.flags |= flag::LAW_NOT_FINITE;
             return Err(Cause::LawNotFinite);
         }
-        let limited = limit(&**vehicle, wanted, reference.curvature_1_m, wheels, seconds);
+        let limited = limit(&**vehicle, wanted, reference.rest_curvature_1_m, wheels, seconds);
         feedback.settle(&input, limited.speed_limited || limited.step_limited, params.period_s());
         *wheels = limited.wheels;
         fill_wanted(record, wanted, &limited);

@@ -49,7 +49,7 @@ pub(super) fn bring_to_rest(slots: &mut [Slot], vehicle: &dyn Vehicle) {
         if !joins || literal_exit <= exit + SAME_RATE {
             return;
         }
-        let decel = stretch.brake_decel(vehicle);
+        let decel = stretch.brake_decel(vehicle, exit);
         if let Some(from_s) = stretch.brake_from_s(exit, decel) {
             let begin = stretch.timing(from_s);
             slot.brake = Some(Brake::new(from_s, begin.at, begin.rate, exit, decel));

@@ -46,7 +46,7 @@ fn build_plan(raw: &[u8], vehicle: &dyn Vehicle, strict: bool) -> Result<Plan, V
     };
     let file = file.map_err(|error| vec![format!("not a plan file: {error}")])?;
     let mut findings = check_head(&file);
-    let mut joint = Joint { pose: start_of(&file), curvature_1_m: 0.0, strict };
+    let mut joint = Joint { pose: start_of(&file), curvature_1_m: 0.0, rest_curvature_1_m: 0.0, strict };
     let mut slots = Vec::with_capacity(file.segments.len());
     for (index, segment) in file.segments.iter().enumerate() {
         let place = format!("segments[{index}] ({})", segment.kind);
@@ -57,7 +57,12 @@ fn build_plan(raw: &[u8], vehicle: &dyn Vehicle, strict: bool) -> Result<Plan, V
                     format!("{place}: {at_s:.3} s after its beginning it asks for {excess}: slow down or turn wider")
                 }));
                 let end = stretch.at(stretch.duration_s());
-                joint = Joint { pose: end.pose, curvature_1_m: end.curvature_1_m, strict };
+                joint = Joint {
+                    pose: end.pose,
+                    curvature_1_m: end.curvature_1_m,
+                    rest_curvature_1_m: end.rest_curvature_1_m,
+                    strict,
+                };
                 slots.push(Slot { kind, begin_s: 0.0, stretch, brake: None });
             }
             Err(problems) => findings.extend(problems.iter().map(|problem| format!("{place}.{problem}"))),
@@ -154,12 +159,24 @@ fn build(segment: &RawSegment, joint: Joint) -> Result<(&'static str, Box<dyn St
     (kind.build)(segment, &values, joint).map(|stretch| (kind.name, stretch))
 }
 
+/// Lets every rest know what comes after it.
+fn steer_ahead(slots: &mut [Slot]) {
+    let mut next: Option<Reference> = None;
+    for slot in slots.iter_mut().rev() {
+        if let Some(next) = &next {
+            slot.stretch.prepare_for(next);
+        }
+        next = Some(slot.stretch.at(0.0));
+    }
+}
+
 fn finish(
     file: &RawPlan,
     mut slots: Vec<Slot>,
     vehicle: &dyn Vehicle,
     digest: trackhold_proto::blob::Digest,
 ) -> Result<Plan, String> {
+    steer_ahead(&mut slots);
     if !file.open {
         brake::bring_to_rest(&mut slots, vehicle);
     }
@@ -171,7 +188,7 @@ fn finish(
     let last = &slots[slots.len() - 1];
     let mut end = last.at(last.duration_s());
     if !file.open {
-        end = Reference::at_rest(end.pose, end.curvature_1_m);
+        end = end.resting();
     }
     if !(end.pose.x_m.abs() <= MAX_COORDINATE_M && end.pose.y_m.abs() <= MAX_COORDINATE_M) {
         return Err(format!(

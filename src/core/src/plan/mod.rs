@@ -48,9 +48,13 @@ pub struct Reference {
     pub direction: Direction,
     /// Body velocity.
     pub velocity: BodyVelocity,
-    /// Curvature of the path, positive where the heading turns left as the machine moves ahead, 1/m. Where the
-    /// reference rests, what it was just before; 0 on a pivot.
+    /// Curvature of the path, positive where the heading turns left as the machine moves ahead, 1/m. On a dwell that of
+    /// what comes next; 0 on a pivot.
     pub curvature_1_m: f64,
+    /// What a steered machine steers for while it stands, 1/m: the curvature, or ±∞ for a turn on the spot to the left
+    /// (right). A dwell has that of what comes next, so that the wheels turn while the machine rests; the rest at a plan's
+    /// end holds what was last.
+    pub rest_curvature_1_m: f64,
     /// Change of the curvature per metre of progress, which counts up in reverse too, 1/m². 0 on lines, arcs and pivots,
     /// and where a plan rests before its beginning or after its end.
     pub curvature_rate_1_m2: f64,
@@ -68,10 +72,16 @@ impl Reference {
             direction: Direction::of(pose.heading_rad),
             velocity: BodyVelocity::ZERO,
             curvature_1_m,
+            rest_curvature_1_m: curvature_1_m,
             curvature_rate_1_m2: 0.0,
             accel_m_s2: 0.0,
             turn_accel_rad_s2: 0.0,
         }
+    }
+
+    /// At rest in the same place, steered for the same.
+    pub fn resting(self) -> Self {
+        Self { rest_curvature_1_m: self.rest_curvature_1_m, ..Self::at_rest(self.pose, self.curvature_1_m) }
     }
 
     /// The same place, passed at `rate` times the speed while the rate itself changes by `rate_change_1_s`.
@@ -222,8 +232,7 @@ impl Plan {
     /// O(log n). Any value is valid.
     pub fn at(&self, t_s: f64, cursor: &mut usize) -> Reference {
         if t_s < 0.0 {
-            let first = self.slots[0].at(0.0);
-            return Reference::at_rest(first.pose, first.curvature_1_m);
+            return self.slots[0].at(0.0).resting();
         }
         if t_s >= self.duration_s {
             return self.after_end(t_s - self.duration_s);
@@ -236,7 +245,7 @@ impl Plan {
 
     fn after_end(&self, late_s: f64) -> Reference {
         if !self.open {
-            return Reference::at_rest(self.end.pose, self.end.curvature_1_m);
+            return self.end.resting();
         }
         let pose = self.end.pose.moved(self.end.velocity, late_s);
         Reference {

@@ -28,6 +28,13 @@ pub(super) const JOIN_DISTANCE_M: f64 = 0.02;
 /// The first point must meet the previous segment's end within this angle, rad.
 pub(super) const JOIN_HEADING_RAD: f64 = 0.02;
 
+/// A braking curve is looked at in so many places.
+const BRAKE_LOOKS: u32 = 64;
+/// Decelerations that are tried, from the greatest down.
+const BRAKE_STEPS: u32 = 64;
+/// Room for rounding, as a share of the deceleration.
+const BRAKE_ROUNDING: f64 = 1e-9;
+
 /// How the heading turns at a place, per metre of progress.
 #[derive(Clone, Copy, Debug, Default)]
 pub(super) struct Bend {
@@ -114,6 +121,21 @@ impl<G: Geometry> Path<G> {
             .fold(0.0, f64::max)
     }
 
+    /// True if no wheel has to do more than it can on a braking curve that ends at the rate `exit`, as far back as the
+    /// literal timing could be faster.
+    fn can_brake(&self, vehicle: &dyn Vehicle, exit: f64, decel: f64) -> bool {
+        let (extent, fastest) = (self.extent(), self.timing.fastest().1);
+        let reach = ((fastest * fastest - exit * exit).max(0.0) / (2.0 * decel)).min(extent);
+        (0..=BRAKE_LOOKS).all(|look| {
+            let back = reach * f64::from(look) / f64::from(BRAKE_LOOKS);
+            let speed = math::sqrt(exit * exit + 2.0 * decel * back);
+            let bend = self.geometry.bend(extent - back);
+            let (turn, rate) = (self.sign * bend.turn_1_m, self.sign * bend.turn_rate_1_m2);
+            let (least, _) = vehicle.accel_bounds_m_s2(speed, turn, rate, 1.0);
+            -decel >= least - BRAKE_ROUNDING * decel
+        })
+    }
+
     fn excess_at(&self, t_s: f64, vehicle: &dyn Vehicle) -> Option<(f64, String)> {
         let progress = self.timing.at(t_s);
         let curvature_1_m = self.sign * self.geometry.bend(progress.at).turn_1_m;
@@ -149,6 +171,7 @@ impl<G: Geometry> Stretch for Path<G> {
                 turn_rate_rad_s: bend.turn_1_m * progress.rate,
             },
             curvature_1_m: self.sign * bend.turn_1_m,
+            rest_curvature_1_m: self.sign * bend.turn_1_m,
             curvature_rate_1_m2: self.sign * bend.turn_rate_1_m2,
             accel_m_s2: self.sign * progress.accel,
             turn_accel_rad_s2: bend.turn_1_m * progress.accel
@@ -164,11 +187,18 @@ impl<G: Geometry> Stretch for Path<G> {
         self.geometry.seams()
     }
 
-    fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64 {
+    fn brake_decel(&self, vehicle: &dyn Vehicle, exit: f64) -> f64 {
         // Only the bends that a stop from the end's speed could reach count; twice that distance is safely all of them.
-        let (exit, extent) = (self.timing.exit_rate(), self.extent());
-        let reach = exit * exit / vehicle.path_decel_m_s2(0.0);
-        vehicle.path_decel_m_s2(self.sharpest((extent - reach).max(0.0), extent))
+        let (literal, extent) = (self.timing.exit_rate(), self.extent());
+        let reach = literal * literal / vehicle.path_decel_m_s2(0.0);
+        let steady = vehicle.path_decel_m_s2(self.sharpest((extent - reach).max(0.0), extent));
+        if self.geometry.looks() == 1 {
+            return steady;
+        }
+        // A wheel whose share of the speed changes with the curvature has less left for braking: then gentler, and sooner.
+        let gentler = (0..BRAKE_STEPS).map(|step| 1.0 - f64::from(step) / f64::from(BRAKE_STEPS));
+        let mut decels = gentler.map(|share| share * steady);
+        decels.find(|decel| self.can_brake(vehicle, exit, *decel)).unwrap_or(steady)
     }
 
     fn brake_from_s(&self, exit: f64, decel: f64) -> Option<f64> {

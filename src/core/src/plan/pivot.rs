@@ -48,7 +48,10 @@ pub(super) const DWELL: Kind = Kind {
     keys: &[Key::required("duration_s", "s", Bound::positive(86_400.0), "how long to rest")],
     ..Kind::plain("dwell", |_, values, joint| {
         Ok(Box::new(Dwell {
-            rest: Reference::at_rest(joint.pose, joint.curvature_1_m),
+            rest: Reference {
+                rest_curvature_1_m: joint.rest_curvature_1_m,
+                ..Reference::at_rest(joint.pose, joint.curvature_1_m)
+            },
             duration_s: values.get("duration_s"),
         }))
     })
@@ -85,6 +88,7 @@ impl Stretch for Pivot {
             direction: Direction::of(heading_rad),
             velocity: BodyVelocity { speed_m_s: 0.0, turn_rate_rad_s: self.sign * progress.rate },
             curvature_1_m: 0.0,
+            rest_curvature_1_m: self.sign * f64::INFINITY,
             curvature_rate_1_m2: 0.0,
             accel_m_s2: 0.0,
             turn_accel_rad_s2: self.sign * progress.accel,
@@ -95,7 +99,7 @@ impl Stretch for Pivot {
         Travel::default()
     }
 
-    fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64 {
+    fn brake_decel(&self, vehicle: &dyn Vehicle, _exit: f64) -> f64 {
         // A machine that cannot pivot has no plan with one: `first_excess`, or the check, refuses it.
         vehicle.pivot_decel_rad_s2().unwrap_or(AT_ONCE_RAD_S2)
     }
@@ -141,7 +145,12 @@ impl Stretch for Dwell {
         Travel::default()
     }
 
-    fn brake_decel(&self, _vehicle: &dyn Vehicle) -> f64 {
+    fn prepare_for(&mut self, next: &Reference) {
+        self.rest.curvature_1_m = next.curvature_1_m;
+        self.rest.rest_curvature_1_m = next.rest_curvature_1_m;
+    }
+
+    fn brake_decel(&self, _vehicle: &dyn Vehicle, _exit: f64) -> f64 {
         f64::INFINITY
     }
 

@@ -5,6 +5,8 @@
 //! speed gets the derivative of the parabola through its neighbours, projected on its heading; so the sign of the speed
 //! says which way the machine drives. Where two points share a position the machine turns on the spot (or rests).
 
+mod rests;
+
 use super::Reference;
 use super::file::{RawPoint, RawSegment};
 use super::lookup::Lookup;
@@ -19,11 +21,14 @@ use alloc::boxed::Box;
 use alloc::format;
 use alloc::string::String;
 use alloc::vec::Vec;
+use rests::Rests;
 
 /// Two points closer than this are one place, m.
 const SAME_PLACE_M: f64 = 1e-6;
 /// Below this speed the curve's own direction is rounding noise; the points' headings are used, m/s.
 const SLOW_M_S: f64 = 1e-6;
+/// The middle of a piece, as a share of its time.
+const MIDDLE: f64 = 0.5;
 /// A sweep looks no more often than this between two points.
 const MOST_LOOKS: usize = 64;
 /// Below this speed a curvature says nothing about a machine's limits, m/s.
@@ -50,6 +55,7 @@ struct Samples {
     points: Vec<Point>,
     lookup: Lookup,
     path_length_m: f64,
+    rests: Rests,
 }
 
 fn build(raw: &RawSegment, _values: &Values, joint: Joint) -> Result<Box<dyn Stretch>, Vec<Problem>> {
@@ -81,7 +87,9 @@ fn build(raw: &RawSegment, _values: &Values, joint: Joint) -> Result<Box<dyn Str
     }
     let lookup =
         Lookup::new(points.iter().map(|point| point.t_s), points.len(), points[points.len() - 1].t_s);
-    Ok(Box::new(Samples { points, lookup, path_length_m }))
+    let mut samples = Samples { points, lookup, path_length_m, rests: Rests::default() };
+    samples.rests = Rests::of(&samples);
+    Ok(Box::new(samples))
 }
 
 fn check(given: &[RawPoint], joint: Joint) -> Result<(), Vec<Problem>> {
@@ -194,7 +202,9 @@ impl<'a> Piece<'a> {
         let speed = math::sqrt(square);
         if speed < SLOW_M_S {
             let heading = math::wrap(self.from.pose.heading_rad + u * self.turn());
-            return Reference::at_rest(Pose::new(x_m, y_m, heading), 0.0);
+            // At rest a cubic has no curvature; its middle tells where the wheels will have to point.
+            let curvature_1_m = if u == MIDDLE { 0.0 } else { self.reference(MIDDLE).curvature_1_m };
+            return Reference::at_rest(Pose::new(x_m, y_m, heading), curvature_1_m);
         }
         let (per_speed, per_square) = (self.sign / speed, 1.0 / square);
         let direction = Direction { cos: vx * per_speed, sin: vy * per_speed };
@@ -208,6 +218,7 @@ impl<'a> Piece<'a> {
             direction,
             velocity: BodyVelocity { speed_m_s: self.sign * speed, turn_rate_rad_s: turn_rate },
             curvature_1_m: curve_turn_rate * per_speed,
+            rest_curvature_1_m: curve_turn_rate * per_speed,
             curvature_rate_1_m2: self.sign * (gain - 3.0 * curve_turn_rate * gaining) * per_square,
             accel_m_s2: (vx * ax + vy * ay) * per_speed,
             turn_accel_rad_s2: turn_accel,
@@ -227,6 +238,7 @@ impl<'a> Piece<'a> {
         let m0 = self.from.turn_rate_rad_s.unwrap_or(steady) * self.seconds;
         let m1 = self.to.turn_rate_rad_s.unwrap_or(steady) * self.seconds;
         let (b, a) = (3.0 * turn - 2.0 * m0 - m1, m0 + m1 - 2.0 * turn);
+        let rest_curvature_1_m = if turn == 0.0 { 0.0 } else { turn.signum() * f64::INFINITY };
         let heading = math::wrap(self.from.pose.heading_rad + u * (m0 + u * (b + u * a)));
         Reference {
             velocity: BodyVelocity {
@@ -234,6 +246,7 @@ impl<'a> Piece<'a> {
                 turn_rate_rad_s: (m0 + u * (2.0 * b + u * 3.0 * a)) / self.seconds,
             },
             turn_accel_rad_s2: (2.0 * b + 6.0 * a * u) / (self.seconds * self.seconds),
+            rest_curvature_1_m,
             ..Reference::at_rest(Pose { heading_rad: heading, ..self.from.pose }, 0.0)
         }
     }
@@ -287,14 +300,20 @@ impl Samples {
         Piece::between(&self.points[index], &self.points[index + 1])
     }
 
-    /// The piece in force at `t_s`; at a point the later one.
-    fn piece_at(&self, t_s: f64) -> (Piece<'_>, f64) {
+    /// The piece in force at `t_s` with its index, and the share of its time; at a point the later one.
+    fn piece_at(&self, t_s: f64) -> (usize, Piece<'_>, f64) {
         let (low, high) = self.lookup.range(t_s);
         let begun = low + self.points[low..high].partition_point(|point| point.t_s <= t_s);
         let index = begun.saturating_sub(1).min(self.points.len() - 2);
         let piece = self.piece(index);
         let u = ((t_s - piece.from.t_s) * piece.rate_1_s).clamp(0.0, 1.0);
-        (piece, u)
+        (index, piece, u)
+    }
+
+    /// The reference at the share `u` of a piece's time.
+    fn reference(&self, index: usize, piece: &Piece<'_>, u: f64) -> Reference {
+        let reference = piece.reference(u);
+        if piece.on_the_spot { self.rests.steered(index, reference) } else { reference }
     }
 }
 
@@ -312,7 +331,7 @@ impl Stretch for Samples {
     }
 
     fn timing(&self, t_s: f64) -> Progress {
-        let (piece, u) = self.piece_at(t_s);
+        let (_, piece, u) = self.piece_at(t_s);
         let reference = piece.reference(u);
         let accel =
             if piece.on_the_spot { reference.turn_accel_rad_s2 } else { piece.sign * reference.accel_m_s2 };
@@ -327,7 +346,7 @@ impl Stretch for Samples {
         let literal = piece.reference(u);
         let rate = piece.rate(u);
         if rate < SLOW_M_S || progress.rate == 0.0 {
-            return Reference::at_rest(literal.pose, literal.curvature_1_m);
+            return literal.resting();
         }
         let factor = progress.rate / rate;
         Reference {
@@ -340,8 +359,8 @@ impl Stretch for Samples {
     }
 
     fn at(&self, t_s: f64) -> Reference {
-        let (piece, u) = self.piece_at(t_s);
-        piece.reference(u)
+        let (index, piece, u) = self.piece_at(t_s);
+        self.reference(index, &piece, u)
     }
 
     fn sweep(&self, steps: usize, visit: &mut dyn FnMut(f64, &Reference)) {
@@ -351,7 +370,7 @@ impl Stretch for Samples {
             let piece = self.piece(index);
             for look in 0..=looks {
                 let u = look as f64 / looks as f64;
-                visit(piece.from.t_s + u * piece.seconds, &piece.reference(u));
+                visit(piece.from.t_s + u * piece.seconds, &self.reference(index, &piece, u));
             }
         }
     }
@@ -370,11 +389,12 @@ impl Stretch for Samples {
         travel
     }
 
-    fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64 {
+    fn brake_decel(&self, vehicle: &dyn Vehicle, _exit: f64) -> f64 {
         let last = self.points.len() - 2;
         if self.piece(last).on_the_spot {
             return vehicle.pivot_decel_rad_s2().unwrap_or(super::pivot::AT_ONCE_RAD_S2);
         }
+        // What a changing curvature adds is not taken into account: between way-poses its rate is mostly noise.
         // Only the bends that a stop from the end's speed could reach count; twice that distance is safely all of them.
         let exit = self.points[last + 1].speed_m_s;
         let reach = exit * exit / vehicle.path_decel_m_s2(0.0);

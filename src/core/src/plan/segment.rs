@@ -63,13 +63,16 @@ pub trait Stretch: Debug + Send + Sync {
     /// Which ways it drives.
     fn travel(&self) -> Travel;
 
+    /// Tells the beginning of the segment after it to one that rests, so that steered wheels turn there meanwhile.
+    fn prepare_for(&mut self, _next: &Reference) {}
+
     /// Where, strictly inside, the curvature or its rate may step: progress, rising. Computed on request, not for a tick.
     fn seams(&self) -> Vec<f64> {
         Vec::new()
     }
 
-    /// The deceleration with which this machine can brake anywhere on it, m/s² (rad/s²).
-    fn brake_decel(&self, vehicle: &dyn Vehicle) -> f64;
+    /// The deceleration with which this machine can brake on it down to the rate `exit` at its end, m/s² (rad/s²).
+    fn brake_decel(&self, vehicle: &dyn Vehicle, exit: f64) -> f64;
 
     /// The last instant at which the literal timing is no faster than a braking curve that ends the stretch at the rate
     /// `exit` with the deceleration `decel`; none if it is faster everywhere.
@@ -99,6 +102,8 @@ pub struct Joint {
     pub pose: Pose,
     /// The curvature there, 1/m.
     pub curvature_1_m: f64,
+    /// What a machine that rests there is steered for, see [`Reference::rest_curvature_1_m`].
+    pub rest_curvature_1_m: f64,
     /// True if a segment that states its own place is refused where it does not meet this pose; false where the check
     /// looks at the gap.
     pub strict: bool,

@@ -9,6 +9,7 @@ use alloc::format;
 use alloc::sync::Arc;
 use alloc::vec::Vec;
 
+mod braking;
 mod curves;
 mod timing;
 
@@ -152,6 +153,60 @@ fn end_speeds_are_reached_at_constant_acceleration_and_reverse_arcs_turn_as_stat
     assert_eq!(reverse.curvature_1_m, -0.5);
     assert!((at(&plan, 17.0).pose.heading_rad - 2.5).abs() < 1e-12);
     assert_consistent(&plan, &begins);
+}
+
+#[test]
+fn a_rest_is_steered_for_what_comes_next() {
+    let plan = closed(
+        r#"{"kind":"dwell","duration_s":1},{"kind":"dwell","duration_s":1},
+           {"kind":"arc","radius_m":2,"turn_rad":1,"speed_m_s":0.5,"end_speed_m_s":0,"reverse":true},
+           {"kind":"dwell","duration_s":1},{"kind":"pivot","turn_rad":-1,"rate_rad_s":0.5,"end_rate_rad_s":0},
+           {"kind":"dwell","duration_s":1}"#,
+    );
+    for t_s in [-1.0, 0.5, 1.5] {
+        let rest = at(&plan, t_s);
+        assert!(rest.velocity.is_zero() && rest.curvature_1_m == -0.5 && rest.rest_curvature_1_m == -0.5);
+    }
+    let begins: Vec<f64> = plan.segment_begins().collect();
+    // What no formula may meet stays out of the curvature.
+    for (t_s, rest_curvature_1_m) in
+        [(begins[3], f64::NEG_INFINITY), (begins[4] + 0.1, f64::NEG_INFINITY), (99.0, f64::NEG_INFINITY)]
+    {
+        let reference = at(&plan, t_s);
+        assert_eq!(
+            (reference.curvature_1_m, reference.rest_curvature_1_m),
+            (0.0, rest_curvature_1_m),
+            "{t_s}"
+        );
+    }
+    assert_consistent(&plan, &begins);
+}
+
+#[test]
+fn samples_that_rest_are_steered_for_what_comes_next() {
+    let points = r#"{"t_s":0,"x_m":1,"y_m":2,"heading_rad":0.5,"speed_m_s":0},{"t_s":1,"x_m":1,"y_m":2,"heading_rad":0.5,"speed_m_s":0},
+        {"t_s":2,"x_m":1,"y_m":2,"heading_rad":0.5,"speed_m_s":0},{"t_s":4,"x_m":1,"y_m":2,"heading_rad":1.5,"speed_m_s":0},
+        {"t_s":5,"x_m":1,"y_m":2,"heading_rad":1.5,"speed_m_s":0}"#;
+    let plan = closed(&format!(r#"{{"kind":"samples","points":[{points}]}}"#));
+    for t_s in [-1.0, 0.5, 1.5, 3.0, 4.5, 9.0] {
+        assert_eq!(at(&plan, t_s).rest_curvature_1_m, f64::INFINITY, "{t_s}");
+        assert_eq!(at(&plan, t_s).curvature_1_m, 0.0, "{t_s}");
+    }
+    let circle = circle(1.0, 5, false);
+    let resting = circle.replacen(
+        r#"{"t_s":0,"#,
+        r#"{"t_s":-2,"x_m":5,"y_m":4,"heading_rad":1.5707963267948966,"speed_m_s":0},{"t_s":-1,"x_m":5,"y_m":4,"heading_rad":1.5707963267948966,"speed_m_s":0},{"speed_m_s":0,"t_s":0,"#,
+        1,
+    );
+    let raw = file(&resting, false).replace(
+        r#""x_m":1,"y_m":2,"heading_rad":0.5"#,
+        r#""x_m":5,"y_m":4,"heading_rad":1.5707963267948966"#,
+    );
+    let plan = compile(raw.as_bytes(), &*unicycle()).unwrap();
+    let (resting, driving) = (at(&plan, 0.5), at(&plan, 2.3));
+    // The first cubic starts along the heading and bends later, so that its middle is straighter than the circle.
+    assert!(resting.velocity.is_zero() && resting.rest_curvature_1_m > 0.15, "{resting:?}");
+    assert!((driving.curvature_1_m - 0.5).abs() < 0.05, "{driving:?}");
 }
 
 #[test]

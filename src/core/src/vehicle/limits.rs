@@ -60,6 +60,27 @@ fn is_bent(vehicle: &dyn Vehicle, scaled: BodyVelocity, target: &Wheels) -> bool
     (reached - scaled.turn_rate_rad_s).abs() > ROUNDING * (1.0 + scaled.turn_rate_rad_s.abs())
 }
 
+/// See [`Vehicle::swing_s`]. From one side to the other by way of straight ahead: of two front wheels the inner one turns
+/// the faster, and that changes there.
+pub(super) fn swing_s<V: Vehicle + ?Sized>(vehicle: &V, before_1_m: f64, after_1_m: f64) -> Option<f64> {
+    let layout = vehicle.layout();
+    if !layout.is_steered() {
+        return None;
+    }
+    let from = vehicle.wheels(BodyVelocity::ZERO, before_1_m, &[0.0; 4]);
+    let to = vehicle.wheels(BodyVelocity::ZERO, after_1_m, &from);
+    let rates = vehicle.largest_steps(&from, &to, 1.0);
+    let angles = || (0..from.len()).filter(|index| layout.is_angle(*index));
+    let slowest = |way: &dyn Fn(usize) -> f64| {
+        angles().map(|index| way(index).abs() / rates[index]).fold(0.0, f64::max)
+    };
+    Some(if angles().any(|index| from[index] * to[index] < 0.0) {
+        slowest(&|index| from[index]) + slowest(&|index| to[index])
+    } else {
+        slowest(&|index| to[index] - from[index])
+    })
+}
+
 /// The step in which every number goes the same, largest share of its way.
 pub(super) fn part_of_the_way(last: &Wheels, target: &Wheels, steps: &Wheels) -> Step {
     let share = largest_share(last, target, steps);

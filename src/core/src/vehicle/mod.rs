@@ -43,7 +43,8 @@ pub trait Vehicle: Debug + Send + Sync {
     fn layout(&self) -> WheelLayout;
 
     /// The wheel command for a body velocity. A steered machine near rest, where a steering angle is undefined, steers
-    /// for `rest_curvature_1_m`; one whose steering cannot reach the curvature steers as far as it can.
+    /// for `rest_curvature_1_m`, where ±∞ means a turn on the spot to the left (right); one whose steering cannot reach the
+    /// curvature steers as far as it can.
     /// `last` is the last command: where the same motion has two commands the nearer one is taken.
     fn wheels(&self, velocity: BodyVelocity, rest_curvature_1_m: f64, last: &Wheels) -> Wheels;
 
@@ -70,6 +71,12 @@ pub trait Vehicle: Debug + Send + Sync {
     /// The largest step from `last` towards `target` in which no number exceeds its largest step.
     fn step(&self, last: &Wheels, target: &Wheels, seconds: f64) -> Step {
         limits::part_of_the_way(last, target, &self.largest_steps(last, target, seconds))
+    }
+
+    /// How long the steering takes at rest from one curvature to another, s, where ±∞ means a turn on the spot; none for a
+    /// machine that does not steer.
+    fn swing_s(&self, before_1_m: f64, after_1_m: f64) -> Option<f64> {
+        limits::swing_s(self, before_1_m, after_1_m)
     }
 
     /// The greatest magnitude of each number of a wheel command: what a drive may refuse to exceed.

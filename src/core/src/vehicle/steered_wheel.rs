@@ -8,7 +8,8 @@
 //! taken, so that a law's small corrections do not swing the wheel from end to end.
 //!
 //! Steering at rest: near rest, where the body velocity says nothing about the angle, the wheel holds its angle while it
-//! still turns, and takes the reference's curvature once it stands. A standing wheel that points elsewhere than wanted by
+//! still turns, and takes the curvature of what comes next once it stands; before a turn on the spot it goes to the nearer
+//! end. A standing wheel that points elsewhere than wanted by
 //! more than [`STEER_FIRST_RAD`] steers first and drives then: it would take the machine elsewhere.
 
 use super::common::{self, MAX_ACCEL, MAX_DECEL, MAX_JERK, MAX_LATERAL, MAX_STEER_RATE, Margins};
@@ -131,17 +132,31 @@ impl SteeredWheel {
         Aim { speed_m_s: ahead / math::cos_sin(nearer.steer_rad).0, ..nearer }
     }
 
-    /// What is near rest: the angle held, or for the reference's curvature; the speed as far as it points there.
-    fn aim_near_rest(&self, (ahead, aside): (f64, f64), rest_curvature_1_m: f64, last: &Wheels) -> Aim {
-        let steer_rad = if last[0].abs() < STANDING_M_S {
-            let wanted = math::atan(self.wheelbase_m * rest_curvature_1_m);
-            wanted.clamp(-self.max_steer_rad, self.max_steer_rad)
-        } else {
-            last[1]
-        };
-        let (cos, sin) = math::cos_sin(steer_rad);
-        Aim { speed_m_s: ahead * cos + aside * sin, steer_rad, beyond_rad: 0.0 }
+    /// The angle for a curvature. On the spot both ends will do: the one on the side of the turn, unless the wheel points
+    /// to the other side already.
+    fn steer_at_rest(&self, rest_curvature_1_m: f64, last_steer_rad: f64) -> f64 {
+        let wanted = math::atan(self.wheelbase_m * rest_curvature_1_m);
+        let other = last_steer_rad.abs() > STEER_FIRST_RAD && last_steer_rad * wanted < 0.0;
+        let wanted = if rest_curvature_1_m.is_infinite() && other { -wanted } else { wanted };
+        wanted.clamp(-self.max_steer_rad, self.max_steer_rad)
     }
+
+    /// What is near rest: the angle held, or for the reference's curvature; the speed as far as it points there. A law's
+    /// last millimetres do not keep a wheel turning that has to swing.
+    fn aim_near_rest(&self, (ahead, aside): (f64, f64), rest_curvature_1_m: f64, last: &Wheels) -> Aim {
+        let there = self.steer_at_rest(rest_curvature_1_m, last[1]);
+        let (stands, slow) = (last[0].abs() < STANDING_M_S, last[0].abs() < REST_SPEED_M_S);
+        let steer_rad = if stands { there } else { last[1] };
+        let (cos, sin) = math::cos_sin(steer_rad);
+        let waits = slow && is_elsewhere(there, last);
+        let speed_m_s = if waits { 0.0 } else { ahead * cos + aside * sin };
+        Aim { speed_m_s, steer_rad, beyond_rad: 0.0 }
+    }
+}
+
+/// True if the wheel has to steer first.
+fn is_elsewhere(steer_rad: f64, last: &Wheels) -> bool {
+    (steer_rad - last[1]).abs() > STEER_FIRST_RAD
 }
 
 impl Vehicle for SteeredWheel {
@@ -157,8 +172,7 @@ impl Vehicle for SteeredWheel {
             self.aim(wanted, last[1])
         };
         let slow = last[0].abs() < REST_SPEED_M_S;
-        let elsewhere = (aim.steer_rad - last[1]).abs() > STEER_FIRST_RAD;
-        [if slow && elsewhere { 0.0 } else { aim.speed_m_s }, aim.steer_rad, 0.0, 0.0]
+        [if slow && is_elsewhere(aim.steer_rad, last) { 0.0 } else { aim.speed_m_s }, aim.steer_rad, 0.0, 0.0]
     }
 
     fn body(&self, wheels: &Wheels) -> BodyVelocity {

@@ -73,11 +73,12 @@ pub(super) fn draw(report: &Report, plan: &Plan, vehicle: &dyn Vehicle) -> Strin
 fn head(body: &mut String, report: &Report, plan: &Plan) {
     let least = report.segments.iter().map(|segment| segment.authority_left).fold(1.0, f64::min);
     let [information, warnings, unfit] = report.counts;
+    let many = if warnings == 1 { "" } else { "s" };
     put(
         body,
         format_args!(
             "<text x=\"{LEFT}\" y=\"34\" font-size=\"19\" font-weight=\"bold\">{} — {}</text>\n\
-         <text x=\"{LEFT}\" y=\"56\" font-size=\"12\" fill=\"#444\">revision {}, {:.2} s, {:.2} m, authority left {:.1} %; {unfit} unfit, {warnings} warnings, {information} for information</text>\n",
+         <text x=\"{LEFT}\" y=\"56\" font-size=\"12\" fill=\"#444\">revision {}, {:.2} s, {:.2} m, authority left {:.1} %; {unfit} unfit (diamond), {warnings} warning{many} (box), {information} for information (circle)</text>\n",
             escaped(plan.id()),
             report.verdict(),
             plan.revision(),
@@ -319,7 +320,7 @@ fn marks(body: &mut String, frame: &Frame, report: &Report) {
     }
 }
 
-/// A number in a diamond (unfit), a triangle-topped box (warning) or a circle (information).
+/// A number in a diamond (unfit), a box (warning) or a circle (information).
 pub(super) fn mark(body: &mut String, (x, y): (f64, f64), number: usize, severity: Severity) {
     let dark = colour(severity);
     match severity {

@@ -2,7 +2,9 @@
 
 use serde_json::{Value, json};
 use std::fmt::Write as _;
-use trackhold_core::plan::check::{Finding, Peak, Place, Report, SegmentReport, Severity, Where, limit_name};
+use trackhold_core::plan::check::{
+    Fault, Finding, Peak, Place, Report, SegmentReport, Severity, Where, limit_name,
+};
 use trackhold_core::vehicle::LimitName;
 
 /// The text names no more segments than this; JSON has them all.
@@ -133,7 +135,8 @@ fn write_text(text: &mut String, report: &Report, file: &str) -> std::fmt::Resul
             plan.length_m()
         )?;
     }
-    writeln!(text, "\n{unfit} unfit, {warnings} warnings, {information} for information")?;
+    let many = if warnings == 1 { "" } else { "s" };
+    writeln!(text, "\n{unfit} unfit, {warnings} warning{many}, {information} for information")?;
     for (number, finding) in report.findings.iter().enumerate() {
         write_finding(text, number + 1, finding)?;
     }
@@ -157,7 +160,7 @@ fn write_finding(text: &mut String, number: usize, finding: &Finding) -> std::fm
             "     {:.3} {unit} into the segment, at x {:.3} m, y {:.3} m",
             place.progress, place.pose.x_m, place.pose.y_m
         )?;
-        if finding.places > 1 {
+        if finding.places > 1 && finding.fault != Fault::LawAtRest {
             write!(text, "; the worst of {} places", finding.places)?;
         }
         writeln!(text)?;

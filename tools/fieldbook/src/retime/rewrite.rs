@@ -2,7 +2,7 @@
 
 use serde_json::{Map, Value, json};
 use std::fmt::Write as _;
-use trackhold_core::plan::retime::{NewTiming, TimingPoint};
+use trackhold_core::plan::retime::{NewTiming, Retimed, TimingPoint};
 
 /// The keys that say a segment's timing.
 const TIMING_KEYS: [&str; 14] = [
@@ -73,12 +73,15 @@ impl Document {
         slow.print()
     }
 
-    /// The plan with a new timing.
-    pub(super) fn timed(&self, timings: &[NewTiming]) -> String {
+    /// The plan with a new timing, and with the dwells that it needs.
+    pub(super) fn timed(&self, found: &Retimed) -> String {
         let mut timed = self.clone();
-        for (segment, timing) in timed.segments.iter_mut().zip(timings) {
+        for (segment, timing) in timed.segments.iter_mut().zip(&found.timings) {
             match timing {
                 NewTiming::Kept => {}
+                NewTiming::Dwell { duration_s } => {
+                    segment.insert("duration_s".to_owned(), json!(duration_s));
+                }
                 NewTiming::Pivot { rate_rad_s, accel_rad_s2 } => put(
                     segment,
                     [
@@ -91,6 +94,12 @@ impl Document {
                     put(segment, [("timing", Value::Array(points.iter().map(instant).collect()))]);
                 }
             }
+        }
+        let fresh = found.dwells.iter().filter(|dwell| dwell.longer.is_none() && dwell.at_m == 0.0);
+        for dwell in fresh.rev() {
+            let rest = [("kind", json!("dwell")), ("duration_s", json!(dwell.duration_s))];
+            let rest = rest.into_iter().map(|(key, value)| (key.to_owned(), value)).collect();
+            timed.segments.insert(dwell.segment, rest);
         }
         timed.print()
     }

@@ -5,4 +5,5 @@ mod replay;
 mod retime;
 mod robot;
 mod simulate;
+mod steering;
 mod zoh;

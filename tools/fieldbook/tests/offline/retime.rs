@@ -5,7 +5,7 @@ use std::path::{Path, PathBuf};
 use std::process::Command;
 use trackhold::site::Site;
 use trackhold_core::plan::Plan;
-use trackhold_core::plan::check::{Report, check, loads_at};
+use trackhold_core::plan::check::{Fault, Report, check, loads_at};
 use trackhold_core::vehicle::Vehicle;
 
 /// Values of `tests/reference/retime`, made by its script.
@@ -219,10 +219,54 @@ fn a_steered_machine_rests_at_a_curvature_step_and_is_told_so() {
         "{told}"
     );
     assert!(told.contains("rests at 0.000 m of segments[2]: the direction of travel changes"), "{told}");
+    // atan(1.2/4) rad at 80 % of 0.9 rad/s, to the next millisecond.
+    for index in [1, 2] {
+        let words = format!("a dwell of 0.405 s is put in before segments[{index}]");
+        assert!(told.contains(&words), "{words}: {told}");
+    }
+    assert!(steering_times(&config("car.toml"), &out).is_empty());
     let retimed = checked(&config("car.toml"), &out).plan.unwrap();
+    assert_eq!(
+        retimed.stretches().map(|placed| placed.kind).collect::<Vec<_>>(),
+        ["line", "dwell", "arc", "dwell", "line"]
+    );
     for begin_s in retimed.segment_begins() {
         assert!(retimed.at(begin_s, &mut 0).velocity.speed_m_s.abs() < 1e-9);
     }
+}
+
+/// What the check says of rests too short for the steering, at the beginning of the plan too.
+fn steering_times(site: &Path, plan: &Path) -> Vec<String> {
+    let findings = checked(site, plan).findings;
+    let of_time = findings.iter().filter(|finding| finding.fault == Fault::SteeringTime);
+    of_time.map(|finding| finding.line()).collect()
+}
+
+#[test]
+fn rests_last_as_long_as_the_steering_needs_whatever_the_reserve() {
+    let segments = r#"{"kind":"arc","radius_m":2.5,"turn_rad":0.3,"speed_m_s":0.5},{"kind":"dwell","duration_s":0.2},
+        {"kind":"arc","radius_m":2.5,"turn_rad":-0.3,"speed_m_s":0.5},{"kind":"dwell","duration_s":9},
+        {"kind":"line","length_m":2,"speed_m_s":0.5,"reverse":true}"#;
+    let (site, plan, out) =
+        (config("car-ackermann.toml"), plan_file("rests.json", "", segments), scratch("rests-out.json"));
+    for reserve in ["0", "0.2", "0.5"] {
+        let (code, told, error) = run(&site, &plan, &out, &["--reserve", reserve]);
+        assert_eq!(code, 0, "{told}{error}");
+        assert!(
+            told.contains("is put in before segments[0]") && told.contains("the dwell segments[1] lasts"),
+            "{told}"
+        );
+        assert_eq!(steering_times(&site, &out), [] as [&str; 0], "{reserve}");
+        let retimed = checked(&site, &out).plan.unwrap();
+        let lasts: Vec<f64> = retimed.stretches().map(|placed| placed.duration_s).collect();
+        // Both front wheels go by way of straight ahead, so that it takes twice as long as from there.
+        assert!((lasts[2] - 2.0 * lasts[0]).abs() < 0.002 && lasts[4] == 9.0, "{lasts:?}");
+    }
+    // A plan that continues another one begins steered as that one ended.
+    let plan = plan_file("rests-on.json", r#""continues":{"at_s":4},"open":true,"#, segments);
+    let (code, told, error) = run(&site, &plan, &out, &["--start-speed", "0.2"]);
+    assert!(code == 0 && !told.contains("before segments[0]"), "{told}{error}");
+    assert_eq!(steering_times(&site, &out), [] as [&str; 0]);
 }
 
 #[test]
@@ -331,6 +375,18 @@ fn a_curvature_step_inside_a_nurbs_is_passed_slowly_or_at_rest() {
     let (code, told, error) = run(&car, Path::new(&plan), &out, &[]);
     assert_eq!(code, 0, "{told}{error}");
     assert!(told.contains("rests at 6.283 m of segments[0]: the curvature steps from 0.2500 to"), "{told}");
+    // The wheels turn while it rests on the seam: there it is steered for what comes after it.
+    assert!(told.contains("0.405 s of it at 6.283 m of segments[0]"), "{told}");
+    assert_eq!(steering_times(&car, &out), [] as [&str; 0]);
+    let retimed = checked(&car, &out).plan.unwrap();
+    let resting: Vec<f64> = (0..20_000)
+        .map(|index| retimed.at(1e-3 * f64::from(index), &mut 0))
+        .filter(|reference| {
+            reference.velocity.is_zero() && reference.pose.x_m < -1.0 && reference.pose.x_m > -7.0
+        })
+        .map(|reference| reference.rest_curvature_1_m)
+        .collect();
+    assert!((400..410).contains(&resting.len()) && resting.iter().all(|curvature| curvature.abs() < 1e-6));
 }
 
 #[test]

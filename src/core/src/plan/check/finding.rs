@@ -57,6 +57,8 @@ pub enum Fault {
     TurnRateStep,
     /// The curvature jumps.
     CurvatureStep,
+    /// A rest is too short for the steering to get to what comes next.
+    SteeringTime,
     /// The direction of travel changes.
     Cusp,
     /// The motion does not go along the heading.
@@ -87,6 +89,7 @@ impl Fault {
             Self::SpeedStep => "speed-step",
             Self::TurnRateStep => "turn-rate-step",
             Self::CurvatureStep => "curvature-step",
+            Self::SteeringTime => "steering-time",
             Self::Cusp => "cusp",
             Self::Sideways => "sideways",
             Self::Pivot => "pivot",
@@ -110,6 +113,7 @@ impl Fault {
             Self::SpeedStep => "step of the speed",
             Self::TurnRateStep => "step of the turn rate",
             Self::CurvatureStep => "step of the curvature",
+            Self::SteeringTime => "the steering needs",
             Self::Cusp => "step of the speed where the direction of travel changes",
             Self::Sideways => "angle between motion and heading",
             Self::Pivot => "turn rate on the spot",
@@ -132,6 +136,9 @@ impl Fault {
             Self::SpeedStep => "ramp the speed: end_speed_m_s, a profile, or fieldbook retime",
             Self::TurnRateStep => "ramp the rate: end_rate_rad_s, or a profile",
             Self::CurvatureStep => "put a clothoid between the curvatures, or a rest",
+            Self::SteeringTime => {
+                "put in a dwell that lasts as long as the steering needs; fieldbook retime does that"
+            }
             Self::Cusp => "end the one direction at rest, then begin the other from rest",
             Self::Sideways => "let the headings point along the path, or against it in reverse",
             Self::Pivot => "turn along an arc: a machine that steers cannot turn on the spot",
@@ -151,7 +158,7 @@ impl Fault {
             Self::Limit(_) => "slow down or turn wider",
             Self::LawDirection => "choose another law, or the other sign of law.gains.x_p_m",
             Self::LawAtRest => {
-                "nothing, unless the machine drifts there; off-axle keeps its feedback at rest"
+                "nothing to mend, unless the machine drifts there; off-axle keeps its feedback at rest"
             }
         }
     }
@@ -250,8 +257,14 @@ impl Finding {
             Some(_) if (self.fault, self.severity) == (Fault::Cusp, Severity::Information) => {
                 format!("{place}: the direction of travel changes, at rest")
             }
+            Some((value, _))
+                if (self.fault, self.severity) == (Fault::CurvatureStep, Severity::Information) =>
+            {
+                format!("{place}: the curvature steps by {} 1/m, at rest", Number(value))
+            }
             Some((value, limit)) => {
                 let bound = match (self.severity, self.fault) {
+                    (_, Fault::SteeringTime) => format!(", the rest there lasts {} s", Number(limit)),
                     (Severity::Information, _) | (_, Fault::Pivot | Fault::LawDirection) => String::new(),
                     (_, Fault::Limit(_)) => {
                         format!(", the limit is {}{}", Number(limit), Unit(self.unit))

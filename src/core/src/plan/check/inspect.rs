@@ -3,11 +3,12 @@
 use super::super::Plan;
 use super::finding::{Fault, Severity};
 use super::ledger::{Draft, Ledger, Meaning, place};
+use super::steering::{Steering, Swing};
 use super::steps;
 use super::walk::{Look, MOST_LOOKS, narrow};
 use super::{Following, Peak, SegmentReport, Terms, Thresholds, is_rate, loads_at};
 use crate::math;
-use crate::vehicle::{LimitName, Load, Loads, PathState, Vehicle};
+use crate::vehicle::{Load, Loads, Vehicle};
 use alloc::vec::Vec;
 
 /// Number of limit names.
@@ -18,6 +19,8 @@ const ROUNDING: f64 = 1e-9;
 const ROUNDING_OF_RATES: f64 = 1e-6;
 /// A bend that was seen too coarsely is narrowed down; after so many of them a jump is taken as seen.
 const MOST_NARROWED: u32 = 10_000;
+/// A steering that is late by less is in time, s: a tick is longer.
+const SHORTEST_S: f64 = 1e-6;
 /// A jerk is measured over no less than this, s.
 const JERK_OVER_S: f64 = 0.01;
 
@@ -47,6 +50,7 @@ pub(super) struct Inspector<'a> {
     pub(super) still: Option<(Look, u64)>,
     still_in: Option<usize>,
     narrowed: u32,
+    steering: Steering,
 }
 
 impl<'a> Inspector<'a> {
@@ -70,6 +74,7 @@ impl<'a> Inspector<'a> {
             still: None,
             still_in: None,
             narrowed: 0,
+            steering: Steering::default(),
         }
     }
 
@@ -92,6 +97,7 @@ impl<'a> Inspector<'a> {
             self.loads(look);
         }
         self.directions(look);
+        self.steering(look);
         self.previous = Some(*look);
     }
 
@@ -197,7 +203,8 @@ impl<'a> Inspector<'a> {
         let number = (step, self.thresholds.curvature_step_1_m, "1/m");
         let rests = before.abs().min(after.abs()) <= self.thresholds.rest_speed_m_s;
         let speed = before.abs().max(after.abs());
-        if let Some(after_s) = self.steering_s(from, to) {
+        let curvatures = (from.reference.curvature_1_m, to.reference.curvature_1_m);
+        if let Some(after_s) = self.vehicle.swing_s(curvatures.0, curvatures.1) {
             if rests {
                 let meaning = Meaning::SteeringAtRest { after_s };
                 self.note(Fault::CurvatureStep, Severity::Information, to, number, meaning);
@@ -218,16 +225,46 @@ impl<'a> Inspector<'a> {
         self.note(Fault::CurvatureStep, Severity::Warning, to, number, meaning);
     }
 
-    /// How long the steering takes from one curvature to the other, s; none for a machine that does not steer.
-    fn steering_s(&self, from: &Look, to: &Look) -> Option<f64> {
-        let steer = |look: &Look| {
-            let curvature_1_m = look.reference.curvature_1_m;
-            let loads = self.vehicle.loads(&PathState { curvature_1_m, ..PathState::default() });
-            let angle = loads.of(LimitName::SteeringAngle)?.value;
-            Some((if curvature_1_m < 0.0 { -angle } else { angle }, loads.of(LimitName::SteeringRate)?.bound))
+    /// Where a motion begins: is the steering there by then?
+    fn steering(&mut self, look: &Look) {
+        let (rest_speed, sampled) = (self.thresholds.rest_speed_m_s, self.is_sampled(look));
+        let Some(swing) = self.steering.next(look, rest_speed, sampled) else { return };
+        if swing.is_first && self.plan.continues_at().is_some() {
+            return;
+        }
+        let step_1_m = (swing.after_1_m - swing.before_1_m).abs();
+        if step_1_m.is_nan() || step_1_m <= self.thresholds.curvature_step_1_m {
+            return;
+        }
+        let Some(needed_s) = self.vehicle.swing_s(swing.before_1_m, swing.after_1_m) else { return };
+        let rest_s = swing.rest_s(self.plan);
+        let late_s = needed_s - rest_s;
+        if late_s > SHORTEST_S {
+            self.steering_late(&swing, (needed_s, rest_s), step_1_m);
+        }
+    }
+
+    fn steering_late(&mut self, swing: &Swing, (needed_s, rest_s): (f64, f64), step_1_m: f64) {
+        let late_s = needed_s - rest_s;
+        let way = swing.way(self.plan, late_s);
+        let (meaning, off, limit) = if swing.after_1_m.is_infinite() {
+            (Meaning::SpotLate { late_s, off_rad: way }, way, self.thresholds.joint_heading_rad)
+        } else {
+            // After a turn on the spot the wheel steers first and drives then.
+            let off_rad = if step_1_m.is_finite() { 0.5 * step_1_m * way } else { 0.0 };
+            (Meaning::SteeringLate { late_s, way_m: way, off_rad }, off_rad, self.thresholds.steering_off_rad)
         };
-        let ((before, rate), (after, _)) = (steer(from)?, steer(to)?);
-        Some((after - before).abs() / rate)
+        let is_unfit = off > limit && !swing.is_first;
+        let severity = match is_unfit {
+            true => Severity::Unfit,
+            false if late_s > self.thresholds.excess_s => Severity::Warning,
+            false => Severity::Information,
+        };
+        self.note(Fault::SteeringTime, severity, &swing.begin, (needed_s, rest_s, "s"), meaning);
+    }
+
+    fn is_sampled(&self, look: &Look) -> bool {
+        self.plan.slots[look.slot].kind == "samples"
     }
 
     fn jerk(&mut self, from: &Look, to: &Look, max_jerk: f64) {
@@ -239,8 +276,7 @@ impl<'a> Inspector<'a> {
     }
 
     fn loads(&mut self, look: &Look) {
-        let slot = &self.plan.slots[look.slot];
-        let Some(loads) = loads_at(self.vehicle, &look.reference, slot.kind == "samples") else {
+        let Some(loads) = loads_at(self.vehicle, &look.reference, self.is_sampled(look)) else {
             let number = (look.reference.velocity.turn_rate_rad_s.abs(), 0.0, "rad/s");
             self.note(Fault::Pivot, Severity::Unfit, look, number, Meaning::Plain);
             return;

@@ -23,6 +23,10 @@ pub(super) enum Meaning {
     Steering { after_s: f64, way_m: f64, off_rad: f64 },
     /// Steering at rest takes this long, s.
     SteeringAtRest { after_s: f64 },
+    /// The steering arrives this late, s; the reference has then gone so far, m, and the heading is off by so much, rad.
+    SteeringLate { late_s: f64, way_m: f64, off_rad: f64 },
+    /// Likewise on the spot, where the heading is lost.
+    SpotLate { late_s: f64, off_rad: f64 },
     /// The braked end of a plan that is stated to end at speed.
     BrakedEnd,
     /// Beyond the limit for so long, s.
@@ -150,10 +154,14 @@ fn words(draft: &Draft) -> String {
             "the steering needs {after_s:.2} s for it; the machine travels {way_m:.3} m meanwhile and its heading ends {off_rad:.3} rad off: step × way / 2"
         ),
         Meaning::SteeringAtRest { after_s } => {
-            format!(
-                "the steering needs {after_s:.2} s for it at rest; a dwell of that length gives it the time"
-            )
+            format!("the steering needs {after_s:.2} s for it")
         }
+        Meaning::SteeringLate { late_s, way_m, off_rad } => format!(
+            "the steering arrives {late_s:.2} s late; the reference is {way_m:.3} m ahead by then, and the heading up to {off_rad:.3} rad off"
+        ),
+        Meaning::SpotLate { late_s, off_rad } => format!(
+            "the steering arrives {late_s:.2} s late; the reference has turned by {off_rad:.3} rad by then, which the machine does not make up for"
+        ),
         Meaning::BrakedEnd => String::from(
             "the plan is stated to end at speed, so that its last metres are braked with all that the machine has; a last segment that ends at rest by itself keeps a reserve",
         ),
@@ -172,7 +180,8 @@ const fn plain(draft: &Draft) -> &'static str {
         (Fault::Sideways, _) => {
             "wheels roll along the heading only; the path that would be driven is not the one stated"
         }
-        (Fault::Cusp, _) => "the direction of travel changes at rest",
+        // Its line has told that it changes at rest.
+        (Fault::Cusp, _) => "",
         (Fault::Pivot, _) => "a machine that steers cannot turn on the spot",
         (Fault::LawDirection, _) => "the law's point would turn the machine round",
         _ => "",

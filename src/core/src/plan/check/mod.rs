@@ -9,6 +9,7 @@
 //! | `finding` | what is found, in words |
 //! | `walk` | looks at a plan, dense and bounded: the step rule |
 //! | `steps` | what jumps between two looks |
+//! | `steering` | whether rests are long enough for the steering |
 //! | `inspect` | judges look by look |
 //! | `sideways` | way-poses against their headings |
 //! | `ledger` | the worst place of each fault in a segment |
@@ -17,6 +18,7 @@ mod finding;
 mod inspect;
 mod ledger;
 mod sideways;
+mod steering;
 mod steps;
 mod thresholds;
 mod walk;
@@ -227,9 +229,10 @@ fn note_stillness(inspector: &mut Inspector<'_>, plan: &Plan, terms: &Terms) {
         places,
         value: None,
         unit: "",
-        meaning: format!(
-            "the law does not correct the heading while the reference rests or turns on the spot, here and in {places} segments in all"
-        ),
+        meaning: match places {
+            1 => String::from("this segment is the only such one"),
+            _ => format!("this is the first of {places} such segments"),
+        },
         remedy: Fault::LawAtRest.remedy(),
     });
 }

@@ -2,6 +2,7 @@
 
 use super::*;
 use crate::keys::Values;
+use crate::math;
 use crate::vehicle;
 
 const ROLLING: Following = Following { forward: true, reverse: true, at_rest: false };
@@ -97,6 +98,85 @@ fn a_car_may_steer_at_rest() {
     let report = report(segments, &car());
     assert!(report.is_fit(), "{:#?}", report.findings);
     assert_eq!(found(&report, "curvature-step").severity, Severity::Information);
+}
+
+/// Turns on the spot; from straight ahead its wheel needs π/2 s for that.
+fn stacker() -> Terms {
+    terms(
+        "steered-wheel",
+        &[
+            ("wheelbase_m", 1.2),
+            ("max_speed_m_s", 1.5),
+            ("max_accel_m_s2", 1.0),
+            ("max_steer_rad", 1.6),
+            ("max_steer_rate_rad_s", 1.0),
+        ],
+    )
+}
+
+#[test]
+fn a_rest_too_short_for_the_steering_is_told_with_both_times() {
+    let rest_s = |duration: f64| {
+        format!(
+            r#"{{"kind":"line","length_m":1,"speed_m_s":0.5,"profile":"trapezoid","accel_m_s2":0.5}},{{"kind":"dwell","duration_s":{duration}}},
+            {{"kind":"pivot","turn_rad":1,"rate_rad_s":0.2,"profile":"trapezoid","accel_rad_s2":0.2}}"#
+        )
+    };
+    let long = report(&rest_s(1.58), &stacker());
+    assert!(long.is_fit() && !has(&long, "steering-time"), "{:#?}", long.findings);
+    let short = report(&rest_s(1.0), &stacker());
+    let finding = found(&short, "steering-time");
+    assert_eq!((finding.severity, finding.at().unwrap().segment), (Severity::Unfit, 2));
+    let (needed_s, rest_s_found) = finding.value.unwrap();
+    assert!((needed_s - math::FRAC_PI_2).abs() < 1e-12 && (rest_s_found - 1.0).abs() < 1e-5, "{finding:?}");
+    // In 0.571 s the turn makes 0.1 · 0.571².
+    assert!(finding.meaning.contains("0.57 s late") && finding.meaning.contains("0.033 rad"), "{finding:?}");
+    let hardly = report(&rest_s(1.3), &stacker());
+    assert_eq!(found(&hardly, "steering-time").severity, Severity::Warning, "0.27 s: 0.007 rad are lost");
+}
+
+#[test]
+fn a_path_that_begins_unsteered_is_a_warning_and_unfit_where_it_strays() {
+    let arcs = |speed: f64, dwell: &str| {
+        format!(
+            r#"{{"kind":"arc","radius_m":4,"turn_rad":1,"speed_m_s":0.5,"end_speed_m_s":0}},{dwell}
+            {{"kind":"arc","radius_m":4,"turn_rad":-1,"speed_m_s":{speed},"end_speed_m_s":0}}"#
+        )
+    };
+    // Half a circle's curvature to each side takes 2 atan(0.3)/0.5 = 1.17 s.
+    let slow = report(&arcs(0.5, ""), &car());
+    let finding =
+        slow.findings.iter().find(|one| one.fault == Fault::SteeringTime && one.at().unwrap().segment == 1);
+    let finding = finding.unwrap();
+    assert_eq!(finding.severity, Severity::Warning);
+    assert!((finding.value.unwrap().0 - 1.1658).abs() < 1e-4, "{finding:?}");
+    let fast = report(&arcs(1.4, ""), &car());
+    assert!(!fast.is_fit() && found(&fast, "steering-time").severity == Severity::Warning, "the beginning");
+    assert_eq!(fast.findings.iter().filter(|one| one.severity == Severity::Unfit).count(), 1);
+    let hardly = report(&arcs(0.5, r#"{"kind":"dwell","duration_s":1.08},"#), &car());
+    let late = hardly.findings.iter().rfind(|one| one.fault == Fault::SteeringTime).unwrap();
+    assert_eq!(late.severity, Severity::Information, "0.09 s: {late:?}");
+    assert!(late.line().contains("the rest there lasts 1.08 s"), "{}", late.line());
+    let rested = report(&arcs(1.4, r#"{"kind":"dwell","duration_s":1.2},"#), &car());
+    let late = rested.findings.iter().filter(|one| one.fault == Fault::SteeringTime);
+    assert_eq!(late.map(|one| one.at().unwrap().segment).collect::<Vec<_>>(), [0], "{:#?}", rested.findings);
+}
+
+#[test]
+fn after_a_turn_on_the_spot_the_machine_lags_and_at_the_beginning_straight_ahead_is_assumed() {
+    let line = r#"{"kind":"line","length_m":1,"speed_m_s":0.4,"end_speed_m_s":0}"#;
+    let pivot = r#"{"kind":"pivot","turn_rad":1,"rate_rad_s":0.4,"end_rate_rad_s":0}"#;
+    let told = report(&format!("{pivot},{line}"), &stacker());
+    assert!(told.is_fit(), "{:#?}", told.findings);
+    let late: Vec<_> = told.findings.iter().filter(|one| one.fault == Fault::SteeringTime).collect();
+    assert_eq!(late.iter().map(|one| one.at().unwrap().segment).collect::<Vec<_>>(), [0, 1]);
+    assert!(late[1].meaning.contains("0.000 rad off"), "it steers first: {}", late[1].meaning);
+    // Where a plan goes on from another one's end, that end tells.
+    let text =
+        file(&format!("{pivot},{line}")).replace(r#""revision":1"#, r#""revision":1,"continues":{"at_s":3}"#);
+    let going_on = check(text.as_bytes(), &stacker());
+    assert_eq!(going_on.findings.iter().filter(|one| one.fault == Fault::SteeringTime).count(), 1);
+    assert!(!has(&report(&format!("{pivot},{line}"), &cart()), "steering-time"));
 }
 
 #[test]

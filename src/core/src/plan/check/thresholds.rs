@@ -50,6 +50,14 @@ pub const KEYS: &[Key] = &[
         "slower than this counts as at rest, where a steered machine may turn its wheels",
     ),
     Key::with_default(
+        "steering_off_rad",
+        "rad",
+        0.3,
+        Bound::positive(3.0),
+        "a path that begins before the steering is there is a warning, unfit where the heading is off by more than this when it \
+         is; a turn on the spot is unfit from joint_heading_rad on, since no law makes up for it",
+    ),
+    Key::with_default(
         "sideways_rad",
         "rad",
         0.15,
@@ -75,7 +83,8 @@ pub const KEYS: &[Key] = &[
         "s",
         0.1,
         Bound::within(0.0, 10.0),
-        "an acceleration or steering rate beyond its limit for no longer than this is a warning, for longer it is unfit",
+        "an acceleration or steering rate beyond its limit for no longer than this is a warning, for longer it is unfit; \
+         steering that is late by no more than this is for information",
     ),
     Key::with_default(
         "max_samples",
@@ -106,6 +115,7 @@ pub struct Thresholds {
     pub turn_rate_step_rad_s: f64,
     pub curvature_step_1_m: f64,
     pub rest_speed_m_s: f64,
+    pub steering_off_rad: f64,
     pub sideways_rad: f64,
     pub share_warn: f64,
     pub share_unfit: f64,
@@ -127,6 +137,7 @@ impl Thresholds {
             turn_rate_step_rad_s: values.get("turn_rate_step_rad_s"),
             curvature_step_1_m: values.get("curvature_step_1_m"),
             rest_speed_m_s: values.get("rest_speed_m_s"),
+            steering_off_rad: values.get("steering_off_rad"),
             sideways_rad: values.get("sideways_rad"),
             share_warn: values.get("share_warn"),
             share_unfit: values.get("share_unfit"),

@@ -17,6 +17,7 @@
 //! | `blocks`, `jerk`, `barrier`, `average` | under a jerk limit: long runs cut up; the grid, its optimum there, and what makes that smooth |
 //! | `verify` | dense sampling: nothing leaves here that goes beyond a limit |
 //! | `runs` | a whole plan: where it rests, what is driven in one go, the vehicle's limits |
+//! | `swings` | how long a steered machine has to rest there |
 //!
 //! Grid step: [`STEP_M`] on paths of varying curvature, finer on short ones; lines and arcs are solved exactly, whatever
 //! their length.
@@ -29,9 +30,11 @@ mod jerk;
 mod knots;
 mod passes;
 mod runs;
+mod swings;
 mod verify;
 
 pub use runs::{NewTiming, Options, Rest, Retimed, StepRule, of_plan};
+pub use swings::Dwell;
 
 use alloc::vec::Vec;
 use core::fmt;

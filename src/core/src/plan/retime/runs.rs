@@ -3,7 +3,9 @@
 //! A plan rests at cusps, pivots and dwells, and at its ends unless other speeds are given. A steered machine also rests
 //! at curvature steps, since its wheels take time to turn. A machine that can turn in place passes a curvature step at
 //! the speed at which the step of its wheel speeds takes no longer than a settling time within its limits.
+//! Where the steering has to swing at a rest, the rest lasts as long as that takes.
 
+use super::swings::{self, Dwell};
 use super::{Bend, Limits, Path, Run, TimingPoint, Unsolvable, passes};
 use crate::geometry::BodyVelocity;
 use crate::math;
@@ -59,6 +61,11 @@ pub enum NewTiming {
     },
     /// A dwell keeps its duration.
     Kept,
+    /// A dwell that was too short for the steering.
+    Dwell {
+        /// Duration, s.
+        duration_s: f64,
+    },
 }
 
 /// A rest that the plan's geometry makes, apart from its ends, pivots and dwells.
@@ -79,6 +86,9 @@ pub struct Retimed {
     pub timings: Vec<NewTiming>,
     /// Rests on the way.
     pub rests: Vec<Rest>,
+    /// Rests that the steering needs, in order. Those inside a segment are in its timing, and the plan's own dwells that
+    /// are made longer in theirs.
+    pub dwells: Vec<Dwell>,
 }
 
 /// Gives a compiled plan's geometry its fastest timing. What timing it has now does not matter. `top_m_s` says for a
@@ -120,21 +130,24 @@ pub fn of_plan(
     }
     let limits = VehicleLimits { vehicle, steps: options.steps };
     let mut rests = Vec::new();
-    for run in runs(&pieces, &limits, placed.len(), &mut rests) {
-        if let Err(finding) = solve(run, &placed, &limits, options, &mut timings) {
+    let runs = runs(&pieces, &limits, placed.len(), &mut rests);
+    let dwells = swings::dwells(&placed, &runs, vehicle, options, plan.continues_at().is_some());
+    swings::lengthen(&dwells, &placed, &mut timings);
+    for run in &runs {
+        if let Err(finding) = solve(run, &placed, &limits, options, &dwells, &mut timings) {
             findings.push(finding);
         }
     }
-    if findings.is_empty() { Ok(Retimed { timings, rests }) } else { Err(findings) }
+    if findings.is_empty() { Ok(Retimed { timings, rests, dwells }) } else { Err(findings) }
 }
 
 /// A part of a segment on which the curvature is continuous.
 #[derive(Clone, Copy, Debug)]
-struct Piece<'a> {
-    segment: usize,
+pub(super) struct Piece<'a> {
+    pub(super) segment: usize,
     stretch: &'a dyn Stretch,
     uniform: bool,
-    from_m: f64,
+    pub(super) from_m: f64,
     to_m: f64,
     reverse: bool,
     top_m_s: f64,
@@ -194,7 +207,7 @@ fn cut_at_steps<'a>(segment: &Placed<'a>, top_m_s: f64, pieces: &mut Vec<Piece<'
     add(from, length);
 }
 
-/// Where the curvature steps between two places, if it does: by halving, towards the greater change.
+/// Where the curvature has stepped between two places, if it does: by halving, towards the greater change.
 fn step_inside(stretch: &dyn Stretch, mut low: f64, mut high: f64) -> Option<f64> {
     let curvature = |at: f64| bend_at(stretch, at).curvature_1_m;
     let (mut before, mut after) = (curvature(low), curvature(high));
@@ -203,7 +216,7 @@ fn step_inside(stretch: &dyn Stretch, mut low: f64, mut high: f64) -> Option<f64
     if whole < 1e-4 {
         return None;
     }
-    while high - low > 1e-9 {
+    while high - low > 2e-10 {
         let middle = 0.5 * (low + high);
         let at = curvature(middle);
         if (at - before).abs() > (after - at).abs() {
@@ -216,12 +229,12 @@ fn step_inside(stretch: &dyn Stretch, mut low: f64, mut high: f64) -> Option<f64
             return None;
         }
     }
-    Some(0.5 * (low + high))
+    Some(high)
 }
 
 /// Pieces that are driven without a rest between, and the speeds at their ends that are not rests.
-struct RunOf<'a, 'b> {
-    pieces: &'b [Piece<'a>],
+pub(super) struct RunOf<'a, 'b> {
+    pub(super) pieces: &'b [Piece<'a>],
     begins_plan: bool,
     ends_plan: bool,
 }
@@ -274,10 +287,11 @@ fn rests_between(
 }
 
 fn solve(
-    run: RunOf<'_, '_>,
+    run: &RunOf<'_, '_>,
     placed: &[Placed<'_>],
     limits: &VehicleLimits<'_>,
     options: &Options,
+    dwells: &[Dwell],
     timings: &mut [NewTiming],
 ) -> Result<(), String> {
     let paths: Vec<&dyn Path> = run.pieces.iter().map(|piece| piece as &dyn Path).collect();
@@ -287,9 +301,18 @@ fn solve(
         end_speed_m_s: if run.ends_plan { options.end_speed_m_s } else { 0.0 },
         share: 1.0 - options.reserve,
     };
-    let found = super::fastest(&problem, limits).map_err(|why| place_of(&why, &run, placed))?;
+    let found = super::fastest(&problem, limits).map_err(|why| place_of(&why, run, placed))?;
     for (piece, points) in run.pieces.iter().zip(found) {
         let NewTiming::Path(whole) = &mut timings[piece.segment] else { continue };
+        if let Some(last) = whole.last_mut() {
+            let here = |dwell: &&Dwell| (dwell.segment, dwell.at_m) == (piece.segment, piece.from_m);
+            let rest = dwells.iter().find(here).map(|dwell| {
+                let t_s = last.t_s + dwell.duration_s;
+                *last = TimingPoint { s_m: piece.from_m, ..*last };
+                TimingPoint { t_s, ..*last }
+            });
+            whole.extend(rest);
+        }
         let begin_s = whole.last().map_or(0.0, |last| last.t_s);
         let fresh = usize::from(!whole.is_empty());
         whole.extend(points.into_iter().skip(fresh).map(|point| TimingPoint {

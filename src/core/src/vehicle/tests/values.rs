@@ -143,6 +143,47 @@ fn a_standing_steered_wheel_steers_first_and_a_turning_one_holds_near_rest() {
 }
 
 #[test]
+fn at_rest_a_steered_wheel_goes_to_the_nearer_end_before_a_turn_on_the_spot() {
+    let machine = machine("steered-wheel", &STEERED_WHEEL);
+    let steer = |curvature: f64, last: &Wheels| machine.wheels(BodyVelocity::ZERO, curvature, last);
+    let quarter = math::FRAC_PI_2;
+    for (curvature, last_rad, expected) in [
+        (f64::INFINITY, 0.0, quarter),
+        (f64::NEG_INFINITY, 0.0, -quarter),
+        (f64::INFINITY, -0.05, quarter),
+        (f64::INFINITY, -0.3, -quarter),
+        (f64::NEG_INFINITY, 1.57, quarter),
+    ] {
+        assert_eq!(steer(curvature, &[0.0, last_rad, 0.0, 0.0]), [0.0, expected, 0.0, 0.0], "{last_rad}");
+    }
+    // A law's last millimetres give way to a wheel that has to swing: it stops first, then it steers.
+    let creeping = machine.wheels(velocity(0.005, 0.0), f64::INFINITY, &[0.005, 0.0, 0.0, 0.0]);
+    assert_eq!(creeping, [0.0; 4]);
+    let stopped = machine.wheels(velocity(0.005, 0.0), f64::INFINITY, &creeping);
+    assert_eq!(stopped, [0.0, quarter, 0.0, 0.0]);
+}
+
+#[test]
+fn a_swing_takes_the_angle_over_the_rate() {
+    let (wheel, car) = (machine("steered-wheel", &STEERED_WHEEL), machine("car", &CAR));
+    let swing = |machine: &dyn Vehicle, from: f64, to: f64| machine.swing_s(from, to).unwrap();
+    near(swing(&*wheel, 0.0, f64::INFINITY), math::FRAC_PI_2 / 1.2, 1e-15);
+    near(swing(&*wheel, f64::NEG_INFINITY, 0.25), (math::FRAC_PI_2 + math::atan(0.3)) / 1.2, 1e-15);
+    near(swing(&*wheel, f64::NEG_INFINITY, f64::INFINITY), 0.0, 0.0);
+    near(swing(&*car, 0.25, -0.25), 2.0 * math::atan(0.3) / 0.8, 1e-15);
+    // Left of straight ahead the left wheel is the inner one and has the longer way, right of it the right one.
+    let both = machine("car", &with(&CAR, &[("front_track_m", 0.8)]));
+    near(swing(&*both, 0.25, -0.25), 2.0 * math::atan2(0.3, 0.9) / 0.8, 1e-15);
+    near(swing(&*both, 0.0, 0.25), math::atan2(0.3, 0.9) / 0.8, 1e-15);
+    let wired = machine(
+        "car",
+        &with(&CAR, &[("front_track_m", 0.8), ("swap_left_right", 1.0), ("steer_ratio", -3.1)]),
+    );
+    near(swing(&*wired, 0.25, -0.25), 2.0 * math::atan2(0.3, 0.9) / 0.8, 1e-15);
+    assert_eq!(machine("differential", &DIFFERENTIAL).swing_s(0.0, 1.0), None);
+}
+
+#[test]
 fn zero_holds_every_steering_angle() {
     let both = machine("car", &with(&CAR, &[("front_track_m", 0.8)]));
     assert_eq!(both.zero(&[1.5, 0.3, 0.2, 0.0]), [0.0, 0.3, 0.2, 0.0]);
