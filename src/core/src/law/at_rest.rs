@@ -143,7 +143,7 @@ impl Settling {
     /// A machine that steers cannot correct what lies beside it at rest: it corrects the distance along its path.
     fn along_only(&mut self, input: &Input<'_>, vehicle: &dyn Vehicle, gains: &RestGains) -> BodyVelocity {
         let (e_x, _) = input.robot_frame_error_m();
-        let slack = if self.is_settled() { WAKE_FACTOR } else { 1.0 };
+        let slack = if self.is_settled() { WAKE_FACTOR } else { REACHED };
         if e_x.abs() <= slack * gains.distance_m {
             self.phase = Phase::Settled;
             return BodyVelocity::ZERO;
