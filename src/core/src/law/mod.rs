@@ -6,6 +6,7 @@ mod feedback;
 mod input;
 mod kanayama;
 mod off_axle;
+pub mod predictive;
 mod samson;
 
 pub use feedback::{Feedback, FeedbackParams, OutsideDomain};

@@ -1,0 +1,3 @@
+//! Limit-aware prediction.
+
+pub mod qp;
