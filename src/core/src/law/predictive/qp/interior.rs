@@ -22,6 +22,9 @@ const LEAST_BEGIN: f64 = 0.02;
 /// A slope's and a slack's residual shrink by one factor; both count as gone once it is this small.
 const RESIDUAL_GONE: f64 = 1e-8;
 
+/// A cost that is not worth a deviation, m²·s: that of a tenth of a micrometre over a second.
+const NOTHING: f64 = 1e-14;
+
 /// When a solution ends.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Limits {
@@ -111,6 +114,10 @@ impl<const N: usize> Solver<N> {
         }
         if self.is_within_bounds() {
             return Ok(Report { iterations: 0, cost: constant + least });
+        }
+        if -least <= limits.tolerance * constant + NOTHING {
+            self.course = Course::STILL;
+            return Ok(Report { iterations: 0, cost: constant });
         }
         self.begin(-least);
         let mut residual = 1.0;
