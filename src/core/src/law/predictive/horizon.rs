@@ -5,7 +5,7 @@
 //! of them is taken at once, so that the mean over a step of length h is the input at its begin and (h + T)/2 times the
 //! rate.
 
-use super::Weights;
+use super::gains::Weights;
 use super::machine::{Machine, Shares};
 use super::tail;
 use crate::geometry::{Direction, Pose};
@@ -36,6 +36,8 @@ pub(super) struct Horizon<const N: usize> {
     pub(super) knots: [Knot; N],
     /// Where the machine is; its heading goes with the references'.
     pub(super) pose: Pose,
+    /// The reference's heading now; its heading at the first point goes on from it.
+    pub(super) heading_rad: f64,
     /// The last command.
     pub(super) shares: Shares,
 }
@@ -45,7 +47,7 @@ impl<const N: usize> Horizon<N> {
         let pose = Pose::new(0.0, 0.0, 0.0);
         let (shares, weight) = ([0.0; 2], [0.0; 6]);
         let knot = Knot { length_s: 0.0, reach_s: 0.0, change_s: 0.0, pose, shares, weight, effort: 0.0 };
-        Self { knots: [knot; N], pose, shares }
+        Self { knots: [knot; N], pose, heading_rad: 0.0, shares }
     };
 
     /// Looks ahead. `heading_error_rad` is the error's heading, by whole turns as the law has followed it.
@@ -59,7 +61,8 @@ impl<const N: usize> Horizon<N> {
     ) {
         self.pose = input.pose;
         self.shares = machine.of_last(&input.wheels, input.motion);
-        let mut heading = input.pose.heading_rad - heading_error_rad;
+        self.heading_rad = input.pose.heading_rad - heading_error_rad;
+        let mut heading = self.heading_rad;
         let (mut at_s, mut wheels) = (0.0, input.wheels);
         let step_s = weights.step_s.max(period_s);
         let mut reference = input.reference;
@@ -85,12 +88,8 @@ impl<const N: usize> Horizon<N> {
     }
 
     fn add_tail(&mut self, end: &Reference, machine: &Machine, weights: &Weights, step_s: f64) {
-        let (top_speed, top_turn_rate) = machine.top();
-        let effort = 2.0 * weights.tail_effort;
-        let weights = tail::Weights {
-            error: weights.error,
-            effort: [effort / (top_speed * top_speed), effort / (top_turn_rate * top_turn_rate)],
-        };
+        let effort = machine.effort().map(|of_share| weights.tail_effort * of_share);
+        let weights = tail::Weights { error: weights.error, effort };
         let tail = out_of_frame(&tail::weight(end.velocity, step_s, &weights), end.direction);
         if let Some(last) = self.knots.last_mut() {
             last.weight.iter_mut().zip(tail).for_each(|(weight, more)| *weight += more);

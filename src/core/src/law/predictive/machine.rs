@@ -102,8 +102,21 @@ impl Machine {
         (changes.map(|(down, _)| down), changes.map(|(_, up)| up))
     }
 
-    /// The greatest speed (m/s) and turn rate (rad/s).
-    pub(super) fn top(&self) -> (f64, f64) {
-        (self.vehicle.top_speed_m_s(), self.vehicle.top_turn_rate_rad_s())
+    /// What a unit weight of each share weighs in terms of speed (per m²/s²) and turn rate (per rad²/s²). With a steered
+    /// wheel, where the turn rate hangs on the speed, of the greatest of both.
+    pub(super) fn effort(&self) -> [f64; 2] {
+        if self.vehicle.layout().is_steered() {
+            let tops = [self.vehicle.top_speed_m_s(), self.vehicle.top_turn_rate_rad_s()];
+            return tops.map(|top| 1.0 / (top * top));
+        }
+        // The columns of the inverse of the slope: what shares a speed, and a turn rate, takes.
+        let [[a, b], [c, d]] = self.slope([0.0; 2]);
+        let determinant = a * d - b * c;
+        [d * d + c * c, b * b + a * a].map(|squares| squares / (determinant * determinant))
+    }
+
+    /// The greatest turn rate on the spot, rad/s; none for a machine that cannot.
+    pub(super) fn spot_turn_rate_rad_s(&self) -> Option<f64> {
+        self.vehicle.spot_demands().map(|_| self.vehicle.top_turn_rate_rad_s())
     }
 }

@@ -85,18 +85,30 @@ impl<const N: usize> Prediction<N> {
         }
     }
 
-    /// A share of the way along a course of the program made here.
-    pub(super) fn improved(
+    /// The motion of another prediction's inputs and a share of a course of the program made there.
+    pub(super) fn improve(
         &mut self,
+        from: &Self,
         by: &Course<N>,
         share: f64,
-        from: &Self,
         horizon: &Horizon<N>,
         machine: &Machine,
     ) {
         self.follow(horizon, machine, |index, _, _| {
             let (old, change) = (from.shares[index], by.points[index].input);
             [old[0] + share * change[0], old[1] + share * change[1]]
+        });
+    }
+
+    /// The motion of the same inputs `seconds` later, over a horizon that begins there; at its end the reference's.
+    pub(super) fn shift(&mut self, horizon: &Horizon<N>, machine: &Machine, seconds: f64) {
+        let old = self.shares;
+        self.follow(horizon, machine, |index, _, _| {
+            // The end of a step lies in the next one of the old grid, so many seconds after its begin.
+            let Some(next) = horizon.knots.get(index + 1) else { return horizon.knots[index].shares };
+            let (begin, end) = (old[index], old[index + 1]);
+            let part = (seconds / next.length_s).min(1.0);
+            [begin[0] + part * (end[0] - begin[0]), begin[1] + part * (end[1] - begin[1])]
         });
     }
 }
@@ -138,13 +150,13 @@ fn change(stage: &mut Stage, knot: &Knot, machine: &Machine, begin: Pose, mean: 
     stage.turn = [-moved.y_m, moved.x_m];
     stage.length_s = knot.length_s;
     stage.reach_s = knot.reach_s;
-    for side in 0..2 {
+    let mean_slope = |side: usize| {
         let (length, turn) = (knot.length_s * by_input[0][side], knot.length_s * by_input[1][side]);
         let chord = by_length * length + by_turn * turn;
-        stage.input[0][side] = cos * chord - 0.5 * moved.y_m * turn;
-        stage.input[1][side] = sin * chord + 0.5 * moved.x_m * turn;
-        stage.input[2][side] = turn;
-    }
+        [cos * chord - 0.5 * moved.y_m * turn, sin * chord + 0.5 * moved.x_m * turn, turn]
+    };
+    let (first, second) = (mean_slope(0), mean_slope(1));
+    stage.input = core::array::from_fn(|row| [first[row], second[row]]);
 }
 
 fn weigh(stage: &mut Stage, knot: &Knot, end: Pose, shares: Shares) {

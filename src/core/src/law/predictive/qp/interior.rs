@@ -163,6 +163,7 @@ impl<const N: usize> Solver<N> {
                 pair.slack[at] = pair.bound[at].max(LEAST_BEGIN * width);
                 pair.multiplier[at] = target / pair.slack[at];
             }
+            (pair.slack_step, pair.multiplier_step) = ([0.0; BOUNDS], [0.0; BOUNDS]);
         }
     }
 
@@ -180,11 +181,12 @@ impl<const N: usize> Solver<N> {
         let mean = self.complementarity() / count;
         self.weigh();
         self.factors.factor(program, &self.barriers);
-        self.aim(program, 0.0);
-        let share = self.longest_share();
-        let ahead = self.complementarity_after(share) / count;
-        let ratio = ahead / mean;
-        self.aim(program, ratio * ratio * ratio * mean);
+        self.aim(program, 0.0, 0.0);
+        let share = self.longest_share().min(1.0);
+        let ratio = self.complementarity_after(share) / count / mean;
+        // The correction for products of the predictor's steps holds for as far as those steps go; a full one where they
+        // go half the way makes the iterates run in circles.
+        self.aim(program, ratio * ratio * ratio * mean, share * share);
         let share = (KEEP_INSIDE * self.longest_share()).min(1.0);
         if !share.is_finite() {
             return Err(Unsolved::IllPosed);
@@ -204,9 +206,8 @@ impl<const N: usize> Solver<N> {
     }
 
     /// Solves for the course aimed at with complementarity `target`, and for the steps of slacks and multipliers on the
-    /// way there. A target of 0 is the predictor; with another one the products of the predictor's steps are taken off.
-    fn aim(&mut self, program: &Program<N>, target: f64) {
-        let correct = f64::from(target != 0.0);
+    /// way there. `correct` is how much of the products of the last solution's steps is taken off.
+    fn aim(&mut self, program: &Program<N>, target: f64, correct: f64) {
         for (pair, barrier) in self.pairs.iter_mut().zip(&mut self.barriers) {
             let mut slope = [0.0; BOUNDS];
             for (at, slope) in slope.iter_mut().enumerate() {
@@ -243,7 +244,6 @@ impl<const N: usize> Solver<N> {
     }
 
     fn complementarity_after(&self, share: f64) -> f64 {
-        let share = share.min(1.0);
         let mut sum = 0.0;
         for pair in &self.pairs {
             for at in 0..BOUNDS {
