@@ -75,6 +75,6 @@ impl Law for Kanayama {
     }
 
     fn domain(&self) -> Domain {
-        Domain { max_heading_error_rad: math::PI, forward: true, reverse: true, at_rest: false }
+        Domain { pivots: false, at_rest: false, ..Domain::EVERYWHERE }
     }
 }

@@ -9,6 +9,7 @@ pub use input::{Ahead, Context, Input, OnPlan, Steady};
 
 use crate::geometry::BodyVelocity;
 use crate::keys::{Key, Problem, Values};
+use crate::math;
 use crate::plan::check::Following;
 use crate::plan::segment::Travel;
 use alloc::boxed::Box;
@@ -26,14 +27,30 @@ pub struct Domain {
     pub forward: bool,
     /// False if the law would turn the machine round in reverse.
     pub reverse: bool,
-    /// True if the law corrects the heading also while the reference rests or turns on the spot.
+    /// The slowest reference (m/s, in magnitude) that the law steers for by itself: a slower one it leaves to another law,
+    /// and says so. 0 for a law that follows at any speed.
+    pub least_speed_m_s: f64,
+    /// True if the law corrects the heading also while the reference turns on the spot.
+    pub pivots: bool,
+    /// True if the law corrects the heading also while the reference rests.
     pub at_rest: bool,
 }
 
 impl Domain {
+    /// No bounds.
+    pub const EVERYWHERE: Self = Self {
+        max_heading_error_rad: math::PI,
+        forward: true,
+        reverse: true,
+        least_speed_m_s: 0.0,
+        pivots: true,
+        at_rest: true,
+    };
+
     /// The domain as a plan's check asks for it.
     pub const fn following(&self) -> Following {
-        Following { forward: self.forward, reverse: self.reverse, at_rest: self.at_rest }
+        let Self { forward, reverse, least_speed_m_s, pivots, at_rest, .. } = *self;
+        Following { forward, reverse, least_speed_m_s, pivots, at_rest }
     }
 
     /// Whether a plan's ways of driving lie in the domain: the direction that does not, as "reverse?".

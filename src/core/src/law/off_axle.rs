@@ -9,7 +9,6 @@
 use super::{Context, Domain, Input, Kind, Law, Machines, Wanted};
 use crate::geometry::{BodyVelocity, Direction, Pose};
 use crate::keys::{Bound, Key, Problem, Values};
-use crate::math;
 use alloc::boxed::Box;
 use alloc::format;
 use alloc::vec;
@@ -122,12 +121,7 @@ impl Law for OffAxle {
     }
 
     fn domain(&self) -> Domain {
-        Domain {
-            max_heading_error_rad: math::PI,
-            forward: self.x_p_m > 0.0,
-            reverse: self.x_p_m < 0.0,
-            at_rest: true,
-        }
+        Domain { forward: self.x_p_m > 0.0, reverse: self.x_p_m < 0.0, ..Domain::EVERYWHERE }
     }
 
     fn settle(&mut self, input: &Input<'_>, limited: bool, seconds: f64) {

@@ -73,6 +73,11 @@ impl Law for Samson {
     }
 
     fn domain(&self) -> Domain {
-        Domain { max_heading_error_rad: MAX_HEADING_ERROR_RAD, forward: true, reverse: true, at_rest: false }
+        Domain {
+            max_heading_error_rad: MAX_HEADING_ERROR_RAD,
+            pivots: false,
+            at_rest: false,
+            ..Domain::EVERYWHERE
+        }
     }
 }

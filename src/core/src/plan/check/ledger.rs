@@ -174,6 +174,7 @@ const fn plain(draft: &Draft) -> &'static str {
         }
         (Fault::Cusp, _) => "the direction of travel changes at rest",
         (Fault::Pivot, _) => "a machine that steers cannot turn on the spot",
+        (Fault::LawSpeed, _) => "the law that it falls back to steers here",
         (Fault::LawDirection, _) => "the law's point would turn the machine round",
         _ => "",
     }
