@@ -1,10 +1,12 @@
 //! How to follow: a law computes a body velocity from reference and pose. One file a law, one trait, one table.
 
+pub mod design;
 mod input;
 mod kanayama;
 mod off_axle;
 mod samson;
 
+pub use design::Design;
 pub use input::{Ahead, Context, Input, OnPlan, Steady};
 
 use crate::geometry::BodyVelocity;
@@ -17,6 +19,7 @@ use alloc::format;
 use alloc::vec;
 use alloc::vec::Vec;
 use core::fmt::Debug;
+use design::Given;
 
 /// Where a law may be used.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -116,8 +119,9 @@ pub trait Law: Debug + Send {
     /// Where the law may be used.
     fn domain(&self) -> Domain;
 
-    /// How fast the feedback across the path is while the reference moves at this speed (m/s): the natural frequency,
-    /// or for a first-order law the inverse of its time constant, rad/s. With dead time τ it must stay well below 1/τ.
+    /// How fast the feedback across the path is while the reference moves at this speed (m/s): the natural frequency
+    /// (above a damping of 1 times that: half the heading's feedback), or for a first-order law the inverse of its time
+    /// constant, rad/s. With dead time τ it must stay well below 1/τ.
     fn bandwidth_rad_s(&self, speed_m_s: f64) -> f64;
 
     /// Tells what became of the last result, so that a law with memory can take the tick in. `limited`: the limits
@@ -137,8 +141,10 @@ pub trait Law: Debug + Send {
 pub struct Kind {
     /// Its name in the site file.
     pub name: &'static str,
-    /// Its gains.
+    /// Its raw gains.
     pub gains: &'static [Key],
+    /// How what an engineer asks for becomes raw gains, if it can.
+    pub design: Option<design::Recipe>,
     /// The machines it is made for.
     pub machines: Machines,
     build: Build,
@@ -161,26 +167,45 @@ pub fn find(name: &str) -> Result<&'static Kind, Problem> {
     })
 }
 
-/// A law's gains with defaults filled in.
+/// Checks the keys of the section `law.gains` as far as that goes without a machine: names, bounds, and what excludes
+/// what.
 ///
 /// # Errors
-/// If there is no such law, or if gains are unknown or outside their bounds.
-pub fn gains(name: &str, given: &Values) -> Result<Values, Vec<Problem>> {
+/// If there is no such law, or every key that does not hold.
+pub fn check(name: &str, given: &Values) -> Result<(), Vec<Problem>> {
     let kind = find(name).map_err(|problem| vec![problem])?;
-    given.checked(kind.gains).map_err(in_gains)
+    Given::read(kind, given).map(drop).map_err(in_gains)
 }
 
-/// Builds a law for a machine, and returns its gains with defaults filled in.
+/// A law's raw gains for a machine: defaults filled in, design keys resolved.
 ///
 /// # Errors
-/// If there is no such law, if it is not made for this machine, or if gains are unknown or outside their bounds.
+/// If there is no such law, or every key that is unknown, outside its bound, excluded by another one, or asks for a raw
+/// gain outside its bound.
+pub fn gains(name: &str, given: &Values, context: &Context) -> Result<Values, Vec<Problem>> {
+    let kind = find(name).map_err(|problem| vec![problem])?;
+    Given::read(kind, given).and_then(|given| given.resolve(kind, context)).map_err(in_gains)
+}
+
+/// Builds a law for a machine, and returns its raw gains: defaults filled in, design keys resolved.
+///
+/// # Errors
+/// If there is no such law, if it is not made for this machine, or what is wrong with its gains: see [`gains`].
 pub fn build(name: &str, given: &Values, context: &Context) -> Result<(Box<dyn Law>, Values), Vec<Problem>> {
     let kind = find(name).map_err(|problem| vec![problem])?;
     if let Some(why) = kind.machines.unfit(context) {
         return Err(vec![Problem::new("name", format!("{name}: {why}"))]);
     }
-    let gains = gains(name, given)?;
+    let gains = gains(name, given, context)?;
     Ok(((kind.build)(&gains, context).map_err(in_gains)?, gains))
+}
+
+/// Raw gains of a law with some keys changed: where those are design keys, the raw gains that they determine go.
+///
+/// # Errors
+/// If there is no such law.
+pub fn changed(name: &str, raw: &Values, keys: &Values) -> Result<Values, Problem> {
+    find(name).map(|kind| design::overlaid(kind, raw, keys))
 }
 
 fn in_gains(problems: Vec<Problem>) -> Vec<Problem> {

@@ -50,6 +50,7 @@ pub(super) const KIND: Kind = Kind {
             "factor on the velocity of the reference's own point; 1 follows without lag",
         ),
     ],
+    design: Some(|design| vec![("k_p", design.bandwidth_rad_s)]),
     machines: Machines::All,
     build: OffAxle::build,
 };

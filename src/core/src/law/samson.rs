@@ -5,11 +5,13 @@
 //! v = (v_d − k_1 |v_d| (x_e + y_e tan φ_e)) / cos φ_e, ω = ω_d − (k_2 v_d y_e + k_3 |v_d| tan φ_e) cos² φ_e.
 //! Forward and reverse, straight and curved; |φ_e| < π/2; without feedback at v_d = 0.
 
-use super::{Domain, Input, Kind, Law, Machines, Wanted};
+use super::{Context, Domain, Input, Kind, Law, Machines, Wanted};
 use crate::geometry::BodyVelocity;
-use crate::keys::{Bound, Key};
+use crate::keys::{Bound, Key, Problem, Values};
 use crate::math;
 use alloc::boxed::Box;
+use alloc::vec;
+use alloc::vec::Vec;
 
 /// At a right angle 1/cos φ_e is infinite; short of it by this much it is 11, and the limits still see a usable ratio of
 /// v to ω, rad.
@@ -40,10 +42,15 @@ pub(super) const KIND: Kind = Kind {
             "feedback of the heading error; critically damped at 2 √k_2, below it the machine weaves",
         ),
     ],
+    design: Some(|design| {
+        vec![
+            ("k_1", design.per_metre_1_m),
+            ("k_2", design.per_metre_1_m * design.per_metre_1_m),
+            ("k_3", 2.0 * design.damping * design.per_metre_1_m),
+        ]
+    }),
     machines: Machines::All,
-    build: |gains, _| {
-        Ok(Box::new(Samson { k_1: gains.get("k_1"), k_2: gains.get("k_2"), k_3: gains.get("k_3") }))
-    },
+    build: Samson::build,
 };
 
 #[derive(Debug)]
@@ -53,6 +60,13 @@ struct Samson {
     k_3: f64,
 }
 
+impl Samson {
+    fn build(gains: &Values, _context: &Context) -> Result<Box<dyn Law>, Vec<Problem>> {
+        let [k_1, k_2, k_3] = ["k_1", "k_2", "k_3"].map(|name| gains.get(name));
+        Ok(Box::new(Self { k_1, k_2, k_3 }))
+    }
+}
+
 impl Law for Samson {
     fn control(&mut self, input: &Input<'_>) -> Wanted {
         let wanted = input.reference.velocity;
@@ -60,16 +74,18 @@ impl Law for Samson {
         let error = input.direction.relative_to(input.reference.direction);
         let tan = error.sin / error.cos;
         let speed = wanted.speed_m_s;
+        let turn_rate = wanted.turn_rate_rad_s
+            - (self.k_2 * speed * y_e + self.k_3 * speed.abs() * tan) * error.cos * error.cos;
         BodyVelocity {
             speed_m_s: (speed - self.k_1 * speed.abs() * (x_e + y_e * tan)) / error.cos,
-            turn_rate_rad_s: wanted.turn_rate_rad_s
-                - (self.k_2 * speed * y_e + self.k_3 * speed.abs() * tan) * error.cos * error.cos,
+            turn_rate_rad_s: turn_rate,
         }
         .into()
     }
 
     fn bandwidth_rad_s(&self, speed_m_s: f64) -> f64 {
-        speed_m_s.abs() * math::sqrt(self.k_2)
+        // Overdamped, the heading's pole is the faster one.
+        speed_m_s.abs() * math::sqrt(self.k_2).max(0.5 * self.k_3)
     }
 
     fn domain(&self) -> Domain {
