@@ -113,7 +113,7 @@ mod tests {
         let problems = chosen(Some("samson"), &[("k_x", 2.0)]).unwrap_err();
         assert_eq!(
             problem_lines(&problems),
-            "law.gains.k_x: no such key here; known are k_1, k_2, k_3, damping, settling_distance_m, bandwidth_rad_s, \
+            "law.gains.k_x: no such key here; known are k_1, k_2, k_3, k_i, damping, settling_distance_m, bandwidth_rad_s, \
              design_speed_m_s"
         );
         assert!(problem_lines(&chosen(Some("none"), &[]).unwrap_err()).contains("kanayama"));

@@ -6,6 +6,7 @@
 //! frequency |v_d| √k_y and the damping k_φ/(2√k_y): its shape is fixed per metre travelled. At v_d = 0 there is no
 //! heading feedback.
 
+use super::integral::{self, CrossIntegral};
 use super::{Context, Domain, Input, Kind, Law, Machines, Wanted};
 use crate::geometry::BodyVelocity;
 use crate::keys::{Bound, Key, Problem, Values};
@@ -38,6 +39,7 @@ pub(super) const KIND: Kind = Kind {
             Bound::positive(200.0),
             "feedback of the heading error; critically damped at 2 √k_y, below it the machine weaves",
         ),
+        integral::KEY,
     ],
     design: Some(|design| {
         vec![
@@ -55,12 +57,14 @@ struct Kanayama {
     k_x: f64,
     k_y: f64,
     k_heading: f64,
+    integral: CrossIntegral,
 }
 
 impl Kanayama {
     fn build(gains: &Values, _context: &Context) -> Result<Box<dyn Law>, Vec<Problem>> {
-        let [k_x, k_y, k_heading] = ["k_x", "k_y", "k_heading"].map(|name| gains.get(name));
-        Ok(Box::new(Self { k_x, k_y, k_heading }))
+        let (k_y, k_heading) = (gains.get("k_y"), gains.get("k_heading"));
+        let integral = CrossIntegral::new(gains.get("k_i"), k_y * k_heading)?;
+        Ok(Box::new(Self { k_x: gains.get("k_x"), k_y, k_heading, integral }))
     }
 }
 
@@ -73,7 +77,11 @@ impl Law for Kanayama {
         let speed = wanted.speed_m_s;
         let turn_rate =
             wanted.turn_rate_rad_s + speed * self.k_y * e_y + speed.abs() * self.k_heading * error.sin;
-        BodyVelocity { speed_m_s: speed * error.cos + self.k_x * e_x, turn_rate_rad_s: turn_rate }.into()
+        BodyVelocity {
+            speed_m_s: speed * error.cos + self.k_x * e_x,
+            turn_rate_rad_s: self.integral.added_to(turn_rate, input),
+        }
+        .into()
     }
 
     fn bandwidth_rad_s(&self, speed_m_s: f64) -> f64 {
@@ -83,5 +91,13 @@ impl Law for Kanayama {
 
     fn domain(&self) -> Domain {
         Domain { pivots: false, at_rest: false, ..Domain::EVERYWHERE }
+    }
+
+    fn settle(&mut self, input: &Input<'_>, limited: bool, seconds: f64) {
+        self.integral.settle(input, limited, seconds);
+    }
+
+    fn reset(&mut self, _motion: BodyVelocity) {
+        self.integral.reset();
     }
 }

@@ -2,6 +2,7 @@
 
 pub mod design;
 mod input;
+mod integral;
 mod kanayama;
 mod off_axle;
 mod samson;

@@ -5,6 +5,7 @@
 //! v = (v_d − k_1 |v_d| (x_e + y_e tan φ_e)) / cos φ_e, ω = ω_d − (k_2 v_d y_e + k_3 |v_d| tan φ_e) cos² φ_e.
 //! Forward and reverse, straight and curved; |φ_e| < π/2; without feedback at v_d = 0.
 
+use super::integral::{self, CrossIntegral};
 use super::{Context, Domain, Input, Kind, Law, Machines, Wanted};
 use crate::geometry::BodyVelocity;
 use crate::keys::{Bound, Key, Problem, Values};
@@ -41,6 +42,7 @@ pub(super) const KIND: Kind = Kind {
             Bound::positive(200.0),
             "feedback of the heading error; critically damped at 2 √k_2, below it the machine weaves",
         ),
+        integral::KEY,
     ],
     design: Some(|design| {
         vec![
@@ -58,12 +60,14 @@ struct Samson {
     k_1: f64,
     k_2: f64,
     k_3: f64,
+    integral: CrossIntegral,
 }
 
 impl Samson {
     fn build(gains: &Values, _context: &Context) -> Result<Box<dyn Law>, Vec<Problem>> {
-        let [k_1, k_2, k_3] = ["k_1", "k_2", "k_3"].map(|name| gains.get(name));
-        Ok(Box::new(Self { k_1, k_2, k_3 }))
+        let (k_2, k_3) = (gains.get("k_2"), gains.get("k_3"));
+        let integral = CrossIntegral::new(gains.get("k_i"), k_2 * k_3)?;
+        Ok(Box::new(Self { k_1: gains.get("k_1"), k_2, k_3, integral }))
     }
 }
 
@@ -78,7 +82,7 @@ impl Law for Samson {
             - (self.k_2 * speed * y_e + self.k_3 * speed.abs() * tan) * error.cos * error.cos;
         BodyVelocity {
             speed_m_s: (speed - self.k_1 * speed.abs() * (x_e + y_e * tan)) / error.cos,
-            turn_rate_rad_s: turn_rate,
+            turn_rate_rad_s: self.integral.added_to(turn_rate, input),
         }
         .into()
     }
@@ -95,5 +99,13 @@ impl Law for Samson {
             at_rest: false,
             ..Domain::EVERYWHERE
         }
+    }
+
+    fn settle(&mut self, input: &Input<'_>, limited: bool, seconds: f64) {
+        self.integral.settle(input, limited, seconds);
+    }
+
+    fn reset(&mut self, _motion: BodyVelocity) {
+        self.integral.reset();
     }
 }

@@ -6,6 +6,7 @@ use crate::geometry::{Pose, TrackingError};
 use crate::plan::Reference;
 
 mod designs;
+mod integrals;
 
 /// The state in which `tests/reference/zoh/check_values.json` (SciPy) gives each law's result: robot-frame error
 /// (0.10 m, −0.05 m, 0.20 rad), reference speed 0.5 m/s, turn rate 0.2 rad/s.

@@ -110,7 +110,7 @@ fn a_design_key_that_does_not_hold_is_named_with_its_line() {
     );
     assert_eq!(
         gains("setling_distance_m = 2"),
-        "site.toml:13: law.gains.setling_distance_m: no such key here; known are k_x, k_y, k_heading, damping, settling_distance_m, bandwidth_rad_s, design_speed_m_s"
+        "site.toml:13: law.gains.setling_distance_m: no such key here; known are k_x, k_y, k_heading, k_i, damping, settling_distance_m, bandwidth_rad_s, design_speed_m_s"
     );
 }
 
