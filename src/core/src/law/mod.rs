@@ -4,6 +4,8 @@ pub mod design;
 mod input;
 mod integral;
 mod kanayama;
+mod linear;
+mod nonlinear;
 mod off_axle;
 mod samson;
 
@@ -155,7 +157,7 @@ pub struct Kind {
 type Build = fn(&Values, &Context) -> Result<Box<dyn Law>, Vec<Problem>>;
 
 /// All laws.
-pub const KINDS: &[Kind] = &[kanayama::KIND, samson::KIND, off_axle::KIND];
+pub const KINDS: &[Kind] = &[kanayama::KIND, samson::KIND, off_axle::KIND, linear::KIND, nonlinear::KIND];
 
 /// Finds a law in the table.
 ///
