@@ -1,6 +1,7 @@
 //! How to follow: a law computes a body velocity from reference and pose. One file a law, one trait, one table.
 
 pub mod design;
+mod dynamic;
 mod input;
 mod integral;
 mod kanayama;
@@ -157,7 +158,8 @@ pub struct Kind {
 type Build = fn(&Values, &Context) -> Result<Box<dyn Law>, Vec<Problem>>;
 
 /// All laws.
-pub const KINDS: &[Kind] = &[kanayama::KIND, samson::KIND, off_axle::KIND, linear::KIND, nonlinear::KIND];
+pub const KINDS: &[Kind] =
+    &[kanayama::KIND, samson::KIND, off_axle::KIND, linear::KIND, nonlinear::KIND, dynamic::KIND];
 
 /// Finds a law in the table.
 ///

@@ -7,6 +7,8 @@ use crate::plan::Reference;
 
 mod designs;
 mod integrals;
+mod poles;
+mod singular;
 mod values;
 
 fn assert_close(wanted: Wanted, speed_m_s: f64, turn_rate_rad_s: f64) {

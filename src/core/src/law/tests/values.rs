@@ -5,9 +5,9 @@ use super::*;
 use crate::geometry::TrackingError;
 use serde_json::Value;
 
-const VALUES: &str = include_str!("../../../../../tests/reference/laws/check_values.json");
+pub(super) const VALUES: &str = include_str!("../../../../../tests/reference/laws/check_values.json");
 
-fn parsed(text: &str) -> Value {
+pub(super) fn parsed(text: &str) -> Value {
     serde_json::from_str(text).expect("the script writes JSON")
 }
 
