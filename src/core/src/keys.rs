@@ -113,7 +113,8 @@ impl Key {
     }
 }
 
-struct Unit(&'static str);
+/// A unit behind a number, with the space between; nothing for a pure number.
+pub(crate) struct Unit(pub(crate) &'static str);
 
 impl fmt::Display for Unit {
     fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {

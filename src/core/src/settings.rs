@@ -130,7 +130,7 @@ impl Settings {
                 law::build(&self.law.name, &self.law.gains, &context).map_err(|more| within("law", more)).ok()
             }
             // Without a machine none can be built, but what is wrong with its gains can be told already.
-            _ => law::gains(&self.law.name, &self.law.gains)
+            _ => law::check(&self.law.name, &self.law.gains)
                 .map_err(|more| within("law", more))
                 .err()
                 .and(None),

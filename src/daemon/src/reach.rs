@@ -3,7 +3,7 @@
 use crate::site::Site;
 use crate::site::net::{self, LISTEN_MEANING, LOCK_MEMORY_MEANING};
 use std::fmt::{self, Write};
-use trackhold_core::keys::{Key, Values};
+use trackhold_core::keys::{Key, Values, names};
 use trackhold_core::node::params::{self, Params};
 use trackhold_core::plan::check;
 use trackhold_core::settings::{Checked, POSE_KEYS};
@@ -75,7 +75,9 @@ fn write_all(text: &mut String, site: &Site, checked: &Checked) -> fmt::Result {
     writeln!(text, "[vehicle]\nkind = {:?}", settings.vehicle.kind)?;
     write_keys(text, kind.map_or(&[], |kind| kind.keys), &settings.vehicle.values)?;
     writeln!(text, "\n[law]\nname = {:?}\n\n[law.gains]", settings.law.name)?;
-    write_keys(text, law.map_or(&[], |law| law.gains), &settings.law.gains)?;
+    if let Some(law) = law {
+        write_gains(text, law, &settings.law.gains)?;
+    }
     writeln!(text, "\n[node]")?;
     write_keys(text, params::KEYS, &settings.node)?;
     writeln!(text, "\n[pose]")?;
@@ -102,6 +104,16 @@ fn write_keys(text: &mut String, keys: &[Key], values: &Values) -> fmt::Result {
         }
     }
     Ok(())
+}
+
+/// The raw gains in force, and what may be given in their place.
+fn write_gains(text: &mut String, law: &law::Kind, gains: &Values) -> fmt::Result {
+    write_keys(text, law.gains, gains)?;
+    let designed = law.designed();
+    if designed.is_empty() {
+        return Ok(());
+    }
+    writeln!(text, "# In place of {}: {}", designed.join(", "), names(law::design::KEYS))
 }
 
 fn write_net(text: &mut String, site: &Site) -> fmt::Result {
@@ -209,6 +221,22 @@ mod tests {
         let reach = Reach::new(&*checked.vehicle, &checked.params);
         // Textbook: 2 m/s and 4 m/s², v²/(2a).
         assert_eq!((reach.top_speed_m_s, reach.braking_m), (2.0, 0.5));
+    }
+
+    #[test]
+    fn design_keys_are_printed_as_the_raw_gains_that_they_ask_for() {
+        let text = "[vehicle]\nkind = \"unicycle\"\nmax_speed_m_s = 2\nmax_turn_rate_rad_s = 1\nmax_accel_m_s2 = 0.5\n\
+                    max_turn_accel_rad_s2 = 1\n[law]\nname = \"samson\"\n[law.gains]\nsettling_distance_m = 4\ndamping = 0.5\n";
+        let said = describe(&Site::parse(text, "site.toml").unwrap()).unwrap();
+        // Textbook: a = 4/(ζ d) = 2 1/m; k_2 = a², k_3 = 2ζa.
+        for line in [
+            "k_1 = 2 ",
+            "k_2 = 4 ",
+            "k_3 = 2 ",
+            "# In place of k_1, k_2, k_3: damping, settling_distance_m, ",
+        ] {
+            assert!(said.contains(line), "{said}");
+        }
     }
 
     #[test]

@@ -11,7 +11,8 @@ pub struct LawChoice {
     /// Law to follow with. Another one than the site's drops the site's gains: its defaults count, then --gain.
     #[arg(long, value_name = "NAME")]
     pub law: Option<String>,
-    /// A gain of the law; may be given several times. A gain not named keeps its value, or its default.
+    /// A gain of the law, or damping, settling_distance_m, bandwidth_rad_s; may be given several times. A gain that is
+    /// neither named nor determined by one of those keeps its value, or its default.
     #[arg(long = "gain", value_name = "KEY=VALUE", value_parser = parse_gain, allow_negative_numbers = true)]
     pub gains: Vec<(String, f64)>,
 }
@@ -29,12 +30,16 @@ impl LawChoice {
     pub fn apply(&self, settings: &Settings) -> Result<Settings, Vec<Problem>> {
         let same = self.law.as_ref().is_none_or(|name| *name == settings.law.name);
         let name = self.law.clone().unwrap_or_else(|| settings.law.name.clone());
-        let mut gains = if same { settings.law.gains.clone() } else { Values::default() };
-        self.gains.iter().for_each(|(key, value)| gains.set(key, *value));
+        let kept = if same { settings.law.gains.clone() } else { Values::default() };
+        let mut given = Values::default();
+        self.gains.iter().for_each(|(key, value)| given.set(key, *value));
         // Checked by itself first: a message about "--gain" should not be mixed with what else is wrong.
-        law::gains(&name, &gains).map_err(|problems| {
-            problems.into_iter().map(|problem| problem.within("law")).collect::<Vec<_>>()
-        })?;
+        let gains = law::changed(&name, &kept, &given)
+            .map_err(|problem| vec![problem])
+            .and_then(|gains| law::check(&name, &gains).map(|()| gains))
+            .map_err(|problems| {
+                problems.into_iter().map(|problem| problem.within("law")).collect::<Vec<_>>()
+            })?;
         let chosen = Settings { law: LawSettings { name, gains }, ..settings.clone() };
         Ok(chosen.checked()?.settings)
     }
@@ -94,9 +99,23 @@ mod tests {
     }
 
     #[test]
+    fn a_design_key_takes_the_place_of_the_sites_gains_that_it_determines() {
+        let law = chosen(None, &[("bandwidth_rad_s", 1.5), ("damping", 1.0)]).unwrap();
+        // At half the top speed, 0.5 m/s: 3 1/m.
+        assert_eq!(["k_x", "k_y", "k_heading"].map(|gain| law.gains.get(gain)), [1.5, 9.0, 6.0]);
+        assert_eq!(law.gains.find("bandwidth_rad_s"), None, "the settings keep raw gains only");
+        let problems = chosen(None, &[("bandwidth_rad_s", 1.5), ("k_x", 2.0)]).unwrap_err();
+        assert!(problem_lines(&problems).contains("law.gains.k_x: given together with bandwidth_rad_s"));
+    }
+
+    #[test]
     fn an_unknown_gain_is_refused_naming_the_known_ones() {
         let problems = chosen(Some("samson"), &[("k_x", 2.0)]).unwrap_err();
-        assert_eq!(problem_lines(&problems), "law.gains.k_x: no such key here; known are k_1, k_2, k_3");
+        assert_eq!(
+            problem_lines(&problems),
+            "law.gains.k_x: no such key here; known are k_1, k_2, k_3, k_i, damping, settling_distance_m, bandwidth_rad_s, \
+             design_speed_m_s"
+        );
         assert!(problem_lines(&chosen(Some("none"), &[]).unwrap_err()).contains("kanayama"));
     }
 

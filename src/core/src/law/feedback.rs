@@ -155,7 +155,7 @@ impl Feedback {
     fn law_is_in_force(&self) -> bool {
         match self.regime {
             Regime::None | Regime::Settling | Regime::Realigning => false,
-            Regime::Pivoting => self.law.domain().at_rest,
+            Regime::Pivoting => self.law.domain().pivots,
             Regime::Moving => true,
         }
     }

@@ -6,11 +6,14 @@
 //! frequency |v_d| √k_y and the damping k_φ/(2√k_y): its shape is fixed per metre travelled. At v_d = 0 there is no
 //! heading feedback.
 
-use super::{Domain, Input, Kind, Law, Machines, Wanted};
+use super::integral::{self, CrossIntegral};
+use super::{Context, Domain, Input, Kind, Law, Machines, Wanted};
 use crate::geometry::BodyVelocity;
-use crate::keys::{Bound, Key};
+use crate::keys::{Bound, Key, Problem, Values};
 use crate::math;
 use alloc::boxed::Box;
+use alloc::vec;
+use alloc::vec::Vec;
 
 pub(super) const KIND: Kind = Kind {
     name: "kanayama",
@@ -36,15 +39,17 @@ pub(super) const KIND: Kind = Kind {
             Bound::positive(200.0),
             "feedback of the heading error; critically damped at 2 √k_y, below it the machine weaves",
         ),
+        integral::KEY,
     ],
+    design: Some(|design| {
+        vec![
+            ("k_x", design.bandwidth_rad_s),
+            ("k_y", design.per_metre_1_m * design.per_metre_1_m),
+            ("k_heading", 2.0 * design.damping * design.per_metre_1_m),
+        ]
+    }),
     machines: Machines::All,
-    build: |gains, _| {
-        Ok(Box::new(Kanayama {
-            k_x: gains.get("k_x"),
-            k_y: gains.get("k_y"),
-            k_heading: gains.get("k_heading"),
-        }))
-    },
+    build: Kanayama::build,
 };
 
 #[derive(Debug)]
@@ -52,6 +57,15 @@ struct Kanayama {
     k_x: f64,
     k_y: f64,
     k_heading: f64,
+    integral: CrossIntegral,
+}
+
+impl Kanayama {
+    fn build(gains: &Values, _context: &Context) -> Result<Box<dyn Law>, Vec<Problem>> {
+        let (k_y, k_heading) = (gains.get("k_y"), gains.get("k_heading"));
+        let integral = CrossIntegral::new(gains.get("k_i"), k_y * k_heading)?;
+        Ok(Box::new(Self { k_x: gains.get("k_x"), k_y, k_heading, integral }))
+    }
 }
 
 impl Law for Kanayama {
@@ -61,20 +75,29 @@ impl Law for Kanayama {
         // cos e_φ and sin e_φ by the addition theorem: both directions are known.
         let error = input.reference.direction.relative_to(input.direction);
         let speed = wanted.speed_m_s;
+        let turn_rate =
+            wanted.turn_rate_rad_s + speed * self.k_y * e_y + speed.abs() * self.k_heading * error.sin;
         BodyVelocity {
             speed_m_s: speed * error.cos + self.k_x * e_x,
-            turn_rate_rad_s: wanted.turn_rate_rad_s
-                + speed * self.k_y * e_y
-                + speed.abs() * self.k_heading * error.sin,
+            turn_rate_rad_s: self.integral.added_to(turn_rate, input),
         }
         .into()
     }
 
     fn bandwidth_rad_s(&self, speed_m_s: f64) -> f64 {
-        speed_m_s.abs() * math::sqrt(self.k_y)
+        // Overdamped, the heading's pole is the faster one.
+        speed_m_s.abs() * math::sqrt(self.k_y).max(0.5 * self.k_heading)
     }
 
     fn domain(&self) -> Domain {
-        Domain { max_heading_error_rad: math::PI, forward: true, reverse: true, at_rest: false }
+        Domain { pivots: false, at_rest: false, ..Domain::EVERYWHERE }
+    }
+
+    fn settle(&mut self, input: &Input<'_>, limited: bool, seconds: f64) {
+        self.integral.settle(input, limited, seconds);
+    }
+
+    fn reset(&mut self, _motion: BodyVelocity) {
+        self.integral.reset();
     }
 }

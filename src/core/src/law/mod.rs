@@ -2,18 +2,25 @@
 
 pub mod at_rest;
 mod blend;
+pub mod design;
+mod dynamic;
 mod feedback;
 mod input;
+mod integral;
 mod kanayama;
+mod linear;
+mod nonlinear;
 mod off_axle;
 pub mod predictive;
 mod samson;
 
+pub use design::Design;
 pub use feedback::{Feedback, FeedbackParams, OutsideDomain};
 pub use input::{Ahead, Context, Input, OnPlan, Steady};
 
 use crate::geometry::BodyVelocity;
 use crate::keys::{Key, Problem, Values};
+use crate::math;
 use crate::plan::check::Following;
 use crate::plan::segment::Travel;
 use alloc::boxed::Box;
@@ -21,6 +28,7 @@ use alloc::format;
 use alloc::vec;
 use alloc::vec::Vec;
 use core::fmt::Debug;
+use design::Given;
 
 /// Where a law may be used.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -31,14 +39,30 @@ pub struct Domain {
     pub forward: bool,
     /// False if the law would turn the machine round in reverse.
     pub reverse: bool,
-    /// True if the law corrects the heading also while the reference rests or turns on the spot.
+    /// The slowest reference (m/s, in magnitude) that the law steers for by itself: a slower one it leaves to another law,
+    /// and says so. 0 for a law that follows at any speed.
+    pub least_speed_m_s: f64,
+    /// True if the law corrects the heading also while the reference turns on the spot.
+    pub pivots: bool,
+    /// True if the law corrects the heading also while the reference rests.
     pub at_rest: bool,
 }
 
 impl Domain {
+    /// No bounds.
+    pub const EVERYWHERE: Self = Self {
+        max_heading_error_rad: math::PI,
+        forward: true,
+        reverse: true,
+        least_speed_m_s: 0.0,
+        pivots: true,
+        at_rest: true,
+    };
+
     /// The domain as a plan's check asks for it.
     pub const fn following(&self) -> Following {
-        Following { forward: self.forward, reverse: self.reverse, at_rest: self.at_rest }
+        let Self { forward, reverse, least_speed_m_s, pivots, at_rest, .. } = *self;
+        Following { forward, reverse, least_speed_m_s, pivots, at_rest }
     }
 
     /// Whether a plan's ways of driving lie in the domain: the direction that does not, as "reverse?".
@@ -104,8 +128,9 @@ pub trait Law: Debug + Send {
     /// Where the law may be used.
     fn domain(&self) -> Domain;
 
-    /// How fast the feedback across the path is while the reference moves at this speed (m/s): the natural frequency,
-    /// or for a first-order law the inverse of its time constant, rad/s. With dead time τ it must stay well below 1/τ.
+    /// How fast the feedback across the path is while the reference moves at this speed (m/s): the natural frequency
+    /// (above a damping of 1 times that: half the heading's feedback), or for a first-order law the inverse of its time
+    /// constant, rad/s. With dead time τ it must stay well below 1/τ.
     fn bandwidth_rad_s(&self, speed_m_s: f64) -> f64;
 
     /// Tells what became of the last result, so that a law with memory can take the tick in. `limited`: the limits
@@ -125,8 +150,10 @@ pub trait Law: Debug + Send {
 pub struct Kind {
     /// Its name in the site file.
     pub name: &'static str,
-    /// Its gains.
+    /// Its raw gains.
     pub gains: &'static [Key],
+    /// How what an engineer asks for becomes raw gains, if it can.
+    pub design: Option<design::Recipe>,
     /// The machines it is made for.
     pub machines: Machines,
     build: Build,
@@ -136,7 +163,15 @@ pub struct Kind {
 type Build = fn(&Values, &Context) -> Result<Box<dyn Law>, Vec<Problem>>;
 
 /// All laws.
-pub const KINDS: &[Kind] = &[kanayama::KIND, samson::KIND, off_axle::KIND, predictive::KIND];
+pub const KINDS: &[Kind] = &[
+    kanayama::KIND,
+    samson::KIND,
+    off_axle::KIND,
+    linear::KIND,
+    nonlinear::KIND,
+    dynamic::KIND,
+    predictive::KIND,
+];
 
 /// Finds a law in the table.
 ///
@@ -149,26 +184,45 @@ pub fn find(name: &str) -> Result<&'static Kind, Problem> {
     })
 }
 
-/// A law's gains with defaults filled in.
+/// Checks the keys of the section `law.gains` as far as that goes without a machine: names, bounds, and what excludes
+/// what.
 ///
 /// # Errors
-/// If there is no such law, or if gains are unknown or outside their bounds.
-pub fn gains(name: &str, given: &Values) -> Result<Values, Vec<Problem>> {
+/// If there is no such law, or every key that does not hold.
+pub fn check(name: &str, given: &Values) -> Result<(), Vec<Problem>> {
     let kind = find(name).map_err(|problem| vec![problem])?;
-    given.checked(kind.gains).map_err(in_gains)
+    Given::read(kind, given).map(drop).map_err(in_gains)
 }
 
-/// Builds a law for a machine, and returns its gains with defaults filled in.
+/// A law's raw gains for a machine: defaults filled in, design keys resolved.
 ///
 /// # Errors
-/// If there is no such law, if it is not made for this machine, or if gains are unknown or outside their bounds.
+/// If there is no such law, or every key that is unknown, outside its bound, excluded by another one, or asks for a raw
+/// gain outside its bound.
+pub fn gains(name: &str, given: &Values, context: &Context) -> Result<Values, Vec<Problem>> {
+    let kind = find(name).map_err(|problem| vec![problem])?;
+    Given::read(kind, given).and_then(|given| given.resolve(kind, context)).map_err(in_gains)
+}
+
+/// Builds a law for a machine, and returns its raw gains: defaults filled in, design keys resolved.
+///
+/// # Errors
+/// If there is no such law, if it is not made for this machine, or what is wrong with its gains: see [`gains`].
 pub fn build(name: &str, given: &Values, context: &Context) -> Result<(Box<dyn Law>, Values), Vec<Problem>> {
     let kind = find(name).map_err(|problem| vec![problem])?;
     if let Some(why) = kind.machines.unfit(context) {
         return Err(vec![Problem::new("name", format!("{name}: {why}"))]);
     }
-    let gains = gains(name, given)?;
+    let gains = gains(name, given, context)?;
     Ok(((kind.build)(&gains, context).map_err(in_gains)?, gains))
+}
+
+/// Raw gains of a law with some keys changed: where those are design keys, the raw gains that they determine go.
+///
+/// # Errors
+/// If there is no such law.
+pub fn changed(name: &str, raw: &Values, keys: &Values) -> Result<Values, Problem> {
+    find(name).map(|kind| design::overlaid(kind, raw, keys))
 }
 
 fn in_gains(problems: Vec<Problem>) -> Vec<Problem> {

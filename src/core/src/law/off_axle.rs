@@ -9,7 +9,6 @@
 use super::{Context, Domain, Input, Kind, Law, Machines, Wanted};
 use crate::geometry::{BodyVelocity, Direction, Pose};
 use crate::keys::{Bound, Key, Problem, Values};
-use crate::math;
 use alloc::boxed::Box;
 use alloc::format;
 use alloc::vec;
@@ -51,6 +50,7 @@ pub(super) const KIND: Kind = Kind {
             "factor on the velocity of the reference's own point; 1 follows without lag",
         ),
     ],
+    design: Some(|design| vec![("k_p", design.bandwidth_rad_s)]),
     machines: Machines::All,
     build: OffAxle::build,
 };
@@ -122,12 +122,7 @@ impl Law for OffAxle {
     }
 
     fn domain(&self) -> Domain {
-        Domain {
-            max_heading_error_rad: math::PI,
-            forward: self.x_p_m > 0.0,
-            reverse: self.x_p_m < 0.0,
-            at_rest: true,
-        }
+        Domain { forward: self.x_p_m > 0.0, reverse: self.x_p_m < 0.0, ..Domain::EVERYWHERE }
     }
 
     fn settle(&mut self, input: &Input<'_>, limited: bool, seconds: f64) {

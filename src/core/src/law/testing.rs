@@ -4,7 +4,7 @@ use super::{Context, Input, Law, Steady, Wanted, build};
 use crate::geometry::{BodyVelocity, Pose};
 use crate::keys::Values;
 use crate::plan::Reference;
-use crate::vehicle;
+use crate::vehicle::{self, Wheels, limit};
 use alloc::boxed::Box;
 
 /// A machine of each kind that a law may have to drive, by its kind's name, with a tick of 20 ms and no dead time.
@@ -54,4 +54,33 @@ pub(crate) fn moving(pose: Pose, speed_m_s: f64, turn_rate_rad_s: f64) -> Refere
 pub(crate) fn ask(law: &mut dyn Law, reference: Reference, pose: Pose) -> Wanted {
     let ahead = Steady(reference);
     law.control(&Input::new(reference, &ahead, pose, ([0.0; 4], reference.velocity), 0.02))
+}
+
+/// An ideal machine: what the limits leave of a law's result moves it at once.
+pub(crate) struct Machine {
+    context: Context,
+    /// Where it is.
+    pub(crate) pose: Pose,
+    wheels: Wheels,
+}
+
+impl Machine {
+    /// At rest somewhere.
+    pub(crate) fn new(context: Context, pose: Pose) -> Self {
+        Self { context, pose, wheels: [0.0; 4] }
+    }
+
+    /// A tick of a law on a reference that goes on as it does now.
+    pub(crate) fn step(&mut self, law: &mut dyn Law, reference: Reference) -> Wanted {
+        let (vehicle, seconds) = (&*self.context.vehicle, self.context.period_s);
+        let ahead = Steady(reference);
+        let input =
+            Input::new(reference, &ahead, self.pose, (self.wheels, vehicle.body(&self.wheels)), seconds);
+        let wanted = law.control(&input);
+        let limited = limit(vehicle, wanted.velocity, reference.curvature_1_m, &self.wheels, seconds);
+        law.settle(&input, limited.speed_limited || limited.step_limited, seconds);
+        self.wheels = limited.wheels;
+        self.pose = self.pose.moved(limited.body, seconds);
+        wanted
+    }
 }

@@ -103,14 +103,19 @@ impl<'t> Reader<'t> {
     fn law(&mut self, table: Option<&DeTable<'_>>) -> LawSettings {
         let known: Vec<&str> = law::KINDS.iter().map(|kind| kind.name).collect();
         let name = self.name("law", "name", table, &known);
-        let keys = law::KINDS.iter().find(|entry| entry.name == name).map(|entry| entry.gains);
+        let keys = law::find(&name).ok().map(law::Kind::keys);
         self.numbers("law", table, Some(&[]), &["name", "gains"]);
         let gains = table.and_then(|table| table.get("gains"));
         if let Some(gains) = gains.filter(|gains| gains.get_ref().as_table().is_none()) {
             let what = format!("{}; write it as a section, [law.gains]", type_of(gains.get_ref()));
             self.found.push((gains.span().start, Problem::new("law.gains", what)));
         }
-        let gains = self.numbers("law.gains", gains.and_then(|gains| gains.get_ref().as_table()), keys, &[]);
+        let gains = self.numbers(
+            "law.gains",
+            gains.and_then(|gains| gains.get_ref().as_table()),
+            keys.as_deref(),
+            &[],
+        );
         LawSettings { name, gains }
     }
 

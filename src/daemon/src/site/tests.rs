@@ -98,6 +98,23 @@ fn unknown_keys_and_sections_are_refused_with_those_known() {
 }
 
 #[test]
+fn a_design_key_that_does_not_hold_is_named_with_its_line() {
+    let gains = |lines: &str| refused_with(&format!("[law.gains]\n{lines}"));
+    assert_eq!(
+        gains("settling_distance_m = 2\nk_y = 4"),
+        "site.toml:14: law.gains.k_y: given together with settling_distance_m, which determines it; give one of the two"
+    );
+    assert_eq!(
+        gains("settling_distance_m = 0.05"),
+        "site.toml:13: law.gains.settling_distance_m: 0.05 m asks for k_y = 10000 1/m², which is not greater than 0 and at most 1000 1/m²"
+    );
+    assert_eq!(
+        gains("setling_distance_m = 2"),
+        "site.toml:13: law.gains.setling_distance_m: no such key here; known are k_x, k_y, k_heading, k_i, damping, settling_distance_m, bandwidth_rad_s, design_speed_m_s"
+    );
+}
+
+#[test]
 fn wrong_types_are_refused_with_what_is_wanted() {
     for (more, said) in [
         ("[node]\nrate_hz = \"fast\"", "site.toml:13: node.rate_hz: \"fast\" is a text, give a number"),

@@ -69,6 +69,7 @@ pub(super) const KIND: Kind = Kind {
     name: "predictive",
     gains: gains::KEYS,
     machines: Machines::All,
+    design: None,
     build: |gains, context| Ok(Box::new(Predictive::<STEPS>::new(gains, context)?)),
 };
 
@@ -203,7 +204,7 @@ impl<const N: usize> Law for Predictive<N> {
     }
 
     fn domain(&self) -> Domain {
-        Domain { max_heading_error_rad: math::PI, forward: true, reverse: true, at_rest: true }
+        Domain::EVERYWHERE
     }
 
     fn bandwidth_rad_s(&self, speed_m_s: f64) -> f64 {

@@ -62,7 +62,7 @@ struct Tick {
 fn gains(list: &[(&str, f64)]) -> Values {
     let mut values = Values::default();
     list.iter().for_each(|(gain, value)| values.set(gain, *value));
-    crate::law::gains("predictive", &values).unwrap()
+    crate::law::gains("predictive", &values, &context("differential")).unwrap()
 }
 
 impl Loop {

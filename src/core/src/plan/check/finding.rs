@@ -71,6 +71,8 @@ pub enum Fault {
     Limit(LimitName),
     /// A direction of travel that the law cannot follow.
     LawDirection,
+    /// A segment slower than the law steers for by itself.
+    LawSpeed,
     /// Rests or pivots, for a law without feedback there.
     LawAtRest,
 }
@@ -96,6 +98,7 @@ impl Fault {
             Self::Jerk => "jerk",
             Self::Limit(limit) => limit_name(limit),
             Self::LawDirection => "law-direction",
+            Self::LawSpeed => "law-speed",
             Self::LawAtRest => "law-at-rest",
         }
     }
@@ -120,7 +123,8 @@ impl Fault {
             Self::Jerk => "jerk",
             Self::Limit(limit) => limit.words(),
             Self::LawDirection => "speed against the law's direction",
-            Self::LawAtRest => "the law does not correct the heading at rest and on pivots",
+            Self::LawSpeed => "greatest speed, below the least that the law steers for by itself,",
+            Self::LawAtRest => "the law does not correct the heading",
         }
     }
 
@@ -157,8 +161,9 @@ impl Fault {
             }
             Self::Limit(_) => "slow down or turn wider",
             Self::LawDirection => "choose another law, or the other sign of law.gains.x_p_m",
+            Self::LawSpeed => "nothing: the law it falls back to steers; or lower law.gains.least_speed_m_s",
             Self::LawAtRest => {
-                "nothing to mend, unless the machine drifts there; off-axle keeps its feedback at rest"
+                "nothing, unless the machine drifts there; lqr and off-axle keep their feedback at rest"
             }
         }
     }

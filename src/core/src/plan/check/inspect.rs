@@ -46,9 +46,11 @@ pub(super) struct Inspector<'a> {
     peaks: [Option<(f64, Load, Look)>; LIMITS],
     curvature: f64,
     curvature_rate: f64,
-    /// Segments in which the reference rests or turns on the spot, and the first such look.
+    /// Segments in which the reference rests or turns on the spot without the law's feedback, and the first such look.
     pub(super) still: Option<(Look, u64)>,
     still_in: Option<usize>,
+    /// The fastest look of the segment at hand.
+    fastest: Option<Look>,
     narrowed: u32,
     steering: Steering,
 }
@@ -73,6 +75,7 @@ impl<'a> Inspector<'a> {
             curvature_rate: 0.0,
             still: None,
             still_in: None,
+            fastest: None,
             narrowed: 0,
             steering: Steering::default(),
         }
@@ -335,7 +338,8 @@ impl<'a> Inspector<'a> {
                 let stood = steps::on_the_spot(&previous) || steps::rests(&previous);
                 stood && previous.slot == look.slot && previous.t_s < look.t_s
             });
-            if dwells && self.still_in != Some(look.slot) {
+            let corrected = if steps::rests(look) { self.following.at_rest } else { self.following.pivots };
+            if dwells && !corrected && self.still_in != Some(look.slot) {
                 self.still_in = Some(look.slot);
                 let (first, count) = self.still.unwrap_or((*look, 0));
                 self.still = Some((first, count + 1));
@@ -350,6 +354,9 @@ impl<'a> Inspector<'a> {
             self.note(Fault::Cusp, Severity::Information, look, number, Meaning::Plain);
         }
         self.way = way;
+        if self.fastest.is_none_or(|fastest| speed.abs() > fastest.reference.velocity.speed_m_s.abs()) {
+            self.fastest = Some(*look);
+        }
         let follows = if way > 0.0 { self.following.forward } else { self.following.reverse };
         if !follows {
             let number = (speed.abs(), 0.0, "m/s");
@@ -361,7 +368,18 @@ impl<'a> Inspector<'a> {
         look.reference.velocity.speed_m_s.abs() <= self.thresholds.rest_speed_m_s
     }
 
+    /// A segment that is slower than the law steers for by itself.
+    fn crawling(&mut self) {
+        let Some(look) = self.fastest.take() else { return };
+        let (speed, least) = (look.reference.velocity.speed_m_s.abs(), self.following.least_speed_m_s);
+        if speed < least {
+            let number = (speed, least, "m/s");
+            self.note(Fault::LawSpeed, Severity::Information, &look, number, Meaning::Plain);
+        }
+    }
+
     fn close_segment(&mut self, index: usize) {
+        self.crawling();
         self.sideways(index);
         self.ledger.close_segment(self.plan);
         let peaks = core::mem::replace(&mut self.peaks, [None; LIMITS]);

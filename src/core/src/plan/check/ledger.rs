@@ -183,6 +183,7 @@ const fn plain(draft: &Draft) -> &'static str {
         // Its line has told that it changes at rest.
         (Fault::Cusp, _) => "",
         (Fault::Pivot, _) => "a machine that steers cannot turn on the spot",
+        (Fault::LawSpeed, _) => "the law that it falls back to steers here",
         (Fault::LawDirection, _) => "the law's point would turn the machine round",
         _ => "",
     }

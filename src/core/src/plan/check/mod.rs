@@ -43,13 +43,17 @@ const CRAWL_M_S: f64 = 0.02;
 const MOST_LINES: usize = 20;
 
 /// Where a law can follow a plan; [`crate::law::Domain::following`] gives it.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Following {
     /// It follows forward.
     pub forward: bool,
     /// It follows in reverse.
     pub reverse: bool,
-    /// It corrects the heading also while the reference rests or turns on the spot.
+    /// The slowest reference that it steers for by itself, m/s.
+    pub least_speed_m_s: f64,
+    /// It corrects the heading also while the reference turns on the spot.
+    pub pivots: bool,
+    /// It corrects the heading also while the reference rests.
     pub at_rest: bool,
 }
 
@@ -213,15 +217,15 @@ fn inspect(plan: Plan, terms: &Terms, detailed: bool) -> Report {
     walk(&plan, &mut |look| inspector.look(look));
     let last = plan.slots.len() - 1;
     inspector.end((!plan.open).then_some(Look { slot: last, t_s: plan.duration_s, reference: plan.end }));
-    note_stillness(&mut inspector, &plan, terms);
+    note_stillness(&mut inspector, &plan);
     let Inspector { ledger, segments, .. } = inspector;
     let (findings, counts) = (ledger.findings, ledger.counts);
     Report { findings, counts, segments, plan: Some(plan) }
 }
 
 /// Rests and pivots, where the law has no feedback of the heading: one finding for the plan.
-fn note_stillness(inspector: &mut Inspector<'_>, plan: &Plan, terms: &Terms) {
-    let Some((look, places)) = inspector.still.filter(|_| !terms.following.at_rest) else { return };
+fn note_stillness(inspector: &mut Inspector<'_>, plan: &Plan) {
+    let Some((look, places)) = inspector.still else { return };
     inspector.ledger.add(Finding {
         fault: Fault::LawAtRest,
         severity: Severity::Information,

@@ -5,7 +5,8 @@ use crate::keys::Values;
 use crate::math;
 use crate::vehicle;
 
-const ROLLING: Following = Following { forward: true, reverse: true, at_rest: false };
+const ROLLING: Following =
+    Following { forward: true, reverse: true, least_speed_m_s: 0.0, pivots: false, at_rest: false };
 
 fn terms(kind: &str, pairs: &[(&str, f64)]) -> Terms {
     let mut values = Values::default();
@@ -217,8 +218,23 @@ fn laws_without_feedback_at_rest_are_told_once_for_the_plan() {
         (found(&told, "law-at-rest").places, found(&told, "law-at-rest").at().unwrap().segment),
         (2, 1)
     );
-    let following = Following { at_rest: true, ..ROLLING };
+    let following = Following { pivots: true, at_rest: true, ..ROLLING };
     assert!(!has(&report(segments, &Terms { following, ..cart() }), "law-at-rest"));
+    let following = Following { at_rest: true, ..ROLLING };
+    let told = report(segments, &Terms { following, ..cart() });
+    assert_eq!(found(&told, "law-at-rest").at().unwrap().segment, 2, "the pivot alone");
+}
+
+#[test]
+fn a_segment_slower_than_the_law_steers_for_is_told() {
+    let segments =
+        r#"{"kind":"line","length_m":1,"speed_m_s":0.5},{"kind":"line","length_m":1,"speed_m_s":0.08}"#;
+    let following = Following { least_speed_m_s: 0.1, ..ROLLING };
+    let told = report(segments, &Terms { following, ..cart() });
+    let slow = found(&told, "law-speed");
+    assert_eq!((slow.at().unwrap().segment, slow.value), (1, Some((0.08, 0.1))));
+    assert_eq!(slow.severity, Severity::Information);
+    assert!(!has(&report(segments, &cart()), "law-speed"));
 }
 
 #[test]
