@@ -6,7 +6,10 @@ mod feedback;
 mod input;
 mod kanayama;
 mod off_axle;
+mod pure_pursuit;
 mod samson;
+mod stanley;
+mod way;
 
 pub use feedback::{Feedback, FeedbackParams, OutsideDomain};
 pub use input::{Ahead, Context, Input, OnPlan, Steady};
@@ -135,7 +138,7 @@ pub struct Kind {
 type Build = fn(&Values, &Context) -> Result<Box<dyn Law>, Vec<Problem>>;
 
 /// All laws.
-pub const KINDS: &[Kind] = &[kanayama::KIND, samson::KIND, off_axle::KIND];
+pub const KINDS: &[Kind] = &[kanayama::KIND, samson::KIND, off_axle::KIND, pure_pursuit::KIND, stanley::KIND];
 
 /// Finds a law in the table.
 ///
@@ -174,6 +177,8 @@ fn in_gains(problems: Vec<Problem>) -> Vec<Problem> {
     problems.into_iter().map(|problem| problem.within("gains")).collect()
 }
 
+#[cfg(test)]
+mod steered_tests;
 #[cfg(test)]
 pub(crate) mod testing;
 #[cfg(test)]
