@@ -11,7 +11,8 @@ use crate::plan::Reference;
 
 /// Places looked at up to a distance, where the path is straight: a bend shows between them.
 const STEPS_TO_DISTANCE: f64 = 8.0;
-/// The longest step along the references, s: one that is about to move away from rest still shows it.
+/// The longest step along the references at first, s: one that is about to move away from rest still shows it. It doubles
+/// while a step gets less than half as far as it should.
 const LONGEST_STEP_S: f64 = 0.25;
 /// How many references are looked at before the path is taken to go on as there.
 const MOST_REFERENCES: usize = 48;
@@ -75,6 +76,7 @@ pub(super) struct Way<'a> {
     /// Where the references end, s ahead.
     end_s: f64,
     end: Reference,
+    longest_step_s: f64,
 }
 
 /// A place on the path, seen from the chassis point.
@@ -94,7 +96,7 @@ impl<'a> Way<'a> {
     /// The path from the reference on, for points at `distance_m` (greater than 0).
     pub(super) fn new(input: &'a Input<'a>, way: f64, distance_m: f64) -> Self {
         let end_s = if moves(&input.reference, way) { f64::INFINITY } else { 0.0 };
-        Self { input, way, distance_m, end_s, end: input.reference }
+        Self { input, way, distance_m, end_s, end: input.reference, longest_step_s: LONGEST_STEP_S }
     }
 
     /// The first point ahead that the path passes at the distance sought, in the chassis frame, m. Where it does not come
@@ -123,10 +125,13 @@ impl<'a> Way<'a> {
     /// The place one step on.
     fn next(&mut self, last: &Place, reference: &mut Reference, steps: usize) -> Place {
         if last.at < self.end_s {
-            let step_s = self.distance_m / STEPS_TO_DISTANCE / reference.velocity.speed_m_s.abs();
-            let at = last.at + step_s.min(LONGEST_STEP_S);
+            let step_m = self.distance_m / STEPS_TO_DISTANCE;
+            let at = last.at + (step_m / reference.velocity.speed_m_s.abs()).min(self.longest_step_s);
             let next = self.input.ahead.reference(at);
             if moves(&next, self.way) && steps < MOST_REFERENCES {
+                if reference.pose.distance_to(next.pose) < 0.5 * step_m {
+                    self.longest_step_s *= 2.0;
+                }
                 *reference = next;
                 return self.place_at(at, next.pose, next.direction);
             }
