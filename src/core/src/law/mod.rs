@@ -12,7 +12,10 @@ mod linear;
 mod nonlinear;
 mod off_axle;
 pub mod predictive;
+mod pure_pursuit;
 mod samson;
+mod stanley;
+mod way;
 
 pub use design::Design;
 pub use feedback::{Feedback, FeedbackParams, OutsideDomain};
@@ -171,6 +174,8 @@ pub const KINDS: &[Kind] = &[
     nonlinear::KIND,
     dynamic::KIND,
     predictive::KIND,
+    pure_pursuit::KIND,
+    stanley::KIND,
 ];
 
 /// Finds a law in the table.
@@ -229,6 +234,8 @@ fn in_gains(problems: Vec<Problem>) -> Vec<Problem> {
     problems.into_iter().map(|problem| problem.within("gains")).collect()
 }
 
+#[cfg(test)]
+mod steered_tests;
 #[cfg(test)]
 pub(crate) mod testing;
 #[cfg(test)]

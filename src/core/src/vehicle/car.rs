@@ -239,6 +239,10 @@ impl Vehicle for Car {
         self.margins.max_jerk_m_s3
     }
 
+    fn wheelbase_m(&self) -> Option<f64> {
+        Some(self.wheelbase_m)
+    }
+
     fn top_speed_m_s(&self) -> f64 {
         self.speed.top
     }

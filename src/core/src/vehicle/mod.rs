@@ -99,6 +99,11 @@ pub trait Vehicle: Debug + Send + Sync {
         *wheels
     }
 
+    /// From the chassis point to the axle or wheel that steers, m; `None` for a machine that does not steer.
+    fn wheelbase_m(&self) -> Option<f64> {
+        None
+    }
+
     /// The greatest speed on a straight line, m/s.
     fn top_speed_m_s(&self) -> f64;
 

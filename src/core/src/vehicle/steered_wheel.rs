@@ -237,6 +237,10 @@ impl Vehicle for SteeredWheel {
         self.margins.max_jerk_m_s3
     }
 
+    fn wheelbase_m(&self) -> Option<f64> {
+        Some(self.wheelbase_m)
+    }
+
     fn top_speed_m_s(&self) -> f64 {
         self.speed.top
     }

@@ -181,6 +181,10 @@ impl Vehicle for Wired {
         self.machine.max_jerk_m_s3()
     }
 
+    fn wheelbase_m(&self) -> Option<f64> {
+        self.machine.wheelbase_m()
+    }
+
     fn top_speed_m_s(&self) -> f64 {
         self.machine.top_speed_m_s()
     }

@@ -227,3 +227,12 @@ fn keys_that_exclude_each_other_are_refused_by_name() {
         assert!(problems.len() == 1 && said.starts_with(expected), "{said}");
     }
 }
+
+#[test]
+fn machines_that_steer_have_a_wheelbase_wired_or_not() {
+    for machine in machines() {
+        assert_eq!(machine.wheelbase_m().is_some(), machine.layout().is_steered(), "{machine:?}");
+    }
+    let wired = machine("car", &with(&CAR, &[("steer_ratio", -2.0)]));
+    assert_eq!(wired.wheelbase_m(), Some(1.2));
+}
