@@ -6,9 +6,11 @@
 use crate::blob::{Blob, BootId, Digest, Text};
 use crate::check;
 use crate::codec::DecodeError;
-use crate::words::{Cause, Mode, StartAt, StopKind};
+use crate::words::{Cause, Mode};
 use bincode::{Decode, Encode};
 use serde::{Deserialize, Serialize};
+
+pub use crate::orders::{Reset, Start, Stop};
 
 /// Most bytes of a plan in one part.
 pub const PART_BYTES: usize = 1024;
@@ -77,36 +79,6 @@ pub struct PlanPart {
     /// The part's bytes (in JSON: hex).
     pub bytes: Blob<PART_BYTES>,
 }
-
-/// Sets the machine in motion. Moves nothing unless boot, plan and start number are those in force.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]
-#[serde(deny_unknown_fields)]
-pub struct Start {
-    /// The daemon's boot identity, from its status.
-    pub boot: BootId,
-    /// Digest of the plan to follow.
-    pub plan: Digest,
-    /// The one-time start number, from its status.
-    pub start_number: u64,
-    /// Where to begin.
-    pub at: StartAt,
-    /// Plan time to begin at where `at` is `plan-time`, ns; else 0.
-    #[serde(default)]
-    pub plan_time_ns: u64,
-}
-
-/// Stops the machine. A request, not a safety function.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]
-#[serde(deny_unknown_fields)]
-pub struct Stop {
-    /// Which kind.
-    pub stop: StopKind,
-}
-
-/// Leaves a latched stop for standby, once its cause is gone. Moves nothing.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]
-#[serde(deny_unknown_fields)]
-pub struct Reset {}
 
 /// Asks for streams, to be sent to where this came from, until the lease ends.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]

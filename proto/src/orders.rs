@@ -1,0 +1,36 @@
+//! What an operator's program orders: the payloads of those messages.
+
+use crate::blob::{BootId, Digest};
+use crate::words::{StartAt, StopKind};
+use bincode::{Decode, Encode};
+use serde::{Deserialize, Serialize};
+
+/// Sets the machine in motion. Moves nothing unless boot, plan and start number are those in force.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct Start {
+    /// The daemon's boot identity, from its status.
+    pub boot: BootId,
+    /// Digest of the plan to follow.
+    pub plan: Digest,
+    /// The one-time start number, from its status.
+    pub start_number: u64,
+    /// Where to begin.
+    pub at: StartAt,
+    /// Plan time to begin at where `at` is `plan-time`, ns; else 0.
+    #[serde(default)]
+    pub plan_time_ns: u64,
+}
+
+/// Stops the machine. A request, not a safety function.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct Stop {
+    /// Which kind.
+    pub stop: StopKind,
+}
+
+/// Leaves a latched stop for standby, once its cause is gone. Moves nothing.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct Reset {}
