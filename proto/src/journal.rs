@@ -170,7 +170,7 @@ fn as_text<S: serde::Serializer>(raw: &[u8], serializer: S) -> Result<S::Ok, S::
 }
 
 /// An order as it arrived.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize)]
+#[derive(Clone, Copy, Debug, PartialEq, Encode, Decode, Serialize)]
 pub struct OrderEvent {
     /// Session of the sender.
     pub session: u64,
@@ -183,7 +183,7 @@ pub struct OrderEvent {
 }
 
 /// What an operator can order.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize)]
+#[derive(Clone, Copy, Debug, PartialEq, Encode, Decode, Serialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum Order {
     /// Set the machine in motion.
@@ -192,6 +192,11 @@ pub enum Order {
     Stop(StopKind),
     /// Leave a latched stop.
     Reset,
+    /// Cap the speed.
+    Cap {
+        /// The share of the plan's pace.
+        share: f64,
+    },
 }
 
 impl Order {
@@ -201,6 +206,7 @@ impl Order {
             Self::Start(_) => 3,
             Self::Stop(_) => 4,
             Self::Reset => 5,
+            Self::Cap { .. } => 10,
         }
     }
 }

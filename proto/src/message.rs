@@ -10,7 +10,7 @@ use crate::words::{Cause, Mode};
 use bincode::{Decode, Encode};
 use serde::{Deserialize, Serialize};
 
-pub use crate::orders::{Reset, Start, Stop};
+pub use crate::orders::{Cap, LEAST_SHARE, Reset, Start, Stop};
 
 /// Most bytes of a plan in one part.
 pub const PART_BYTES: usize = 1024;
@@ -117,7 +117,7 @@ pub struct TimeReply {
     pub reply_sent_ns: u64,
 }
 
-/// The outcome of a plan, start, stop or reset.
+/// The outcome of a plan or an order.
 #[derive(Clone, Copy, Debug, PartialEq, Encode, Decode, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct Ack {
@@ -257,7 +257,7 @@ pub struct Counters {
     pub poses: u64,
     /// Poses refused.
     pub poses_refused: u64,
-    /// Orders refused (start, stop, reset).
+    /// Orders refused (start, stop, reset, cap).
     pub orders_refused: u64,
     /// Plans refused.
     pub plans_refused: u64,
@@ -421,6 +421,7 @@ messages! {
     7 "journal-request" JournalRequest: check::journal_request,
     8 "status-request" StatusRequest,
     9 "time-reply" TimeReply,
+    10 "cap" Cap: check::cap,
     64 "ack" Ack: check::ack,
     65 "command" Command: check::command,
     66 "journal-part" JournalPart: check::journal_part,

@@ -34,3 +34,15 @@ pub struct Stop {
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct Reset {}
+
+/// The least share of the plan's speed that a cap leaves: who wants less means a stop.
+pub const LEAST_SHARE: f64 = 0.05;
+
+/// Caps the speed: the plan's time runs no faster than this share of its own pace, until the next cap. In force at once,
+/// in every mode, and over starts; a daemon begins with 1.
+#[derive(Clone, Copy, Debug, PartialEq, Encode, Decode, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct Cap {
+    /// The share, [`LEAST_SHARE`] to 1.
+    pub share: f64,
+}

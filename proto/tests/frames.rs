@@ -43,7 +43,7 @@ fn the_golden_frames_hold_every_body_and_read_back() {
 #[test]
 fn the_golden_track_log_ends_with_a_digest_of_all_before() {
     let mut log = LOG_MAGIC.to_vec();
-    let [boot, pose, ..] = bodies().try_into().map(|all: [Body; 23]| all).unwrap();
+    let [boot, pose, ..] = bodies().try_into().map(|all: [Body; 24]| all).unwrap();
     let mut append = |number, at_ns, body| write_frame(&Entry { number, at_ns, body }, &mut log);
     append(0, 5, boot);
     append(UNNUMBERED, 0, Body::Gap(Gap { first: 1, last: 41 }));

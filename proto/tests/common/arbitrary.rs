@@ -218,6 +218,7 @@ pub(crate) fn any_message() -> BoxedStrategy<Message> {
         [whole(), whole(), whole()].prop_map(|[request_sent_ns, request_received_ns, reply_sent_ns]| {
             M::TimeReply(TimeReply { request_sent_ns, request_received_ns, reply_sent_ns })
         }),
+        (LEAST_SHARE..=1.0).prop_map(|share| M::Cap(Cap { share })),
         ack().prop_map(M::Ack),
         command().prop_map(M::Command),
         journal_part().prop_map(M::JournalPart),
@@ -253,7 +254,8 @@ fn any_refusal() -> BoxedStrategy<Refusal> {
             R::NoPose,
             R::PlanUnfit,
             R::SequenceReused,
-            R::OtherPlan
+            R::OtherPlan,
+            R::CapOutOfRange
         ]),
         [whole(), whole()].prop_map(|[age_ns, limit_ns]| R::StalePose { age_ns, limit_ns }),
         [number(), number()].prop_map(|[distance_m, limit_m]| R::TooFar { distance_m, limit_m }),
@@ -324,8 +326,12 @@ fn any_tick() -> BoxedStrategy<TickRecord> {
 }
 
 fn any_event() -> BoxedStrategy<Body> {
-    let order =
-        prop_oneof![start().prop_map(Order::Start), stop_kind().prop_map(Order::Stop), Just(Order::Reset)];
+    let order = prop_oneof![
+        start().prop_map(Order::Start),
+        stop_kind().prop_map(Order::Stop),
+        Just(Order::Reset),
+        number().prop_map(|share| Order::Cap { share }),
+    ];
     let note = prop_oneof![
         (whole(), text()).prop_map(|(count, last)| Note::Malformed { count, last }),
         whole().prop_map(|count| Note::EventsDropped { count }),

@@ -88,6 +88,7 @@ fn events() -> Vec<Body> {
         order(5, Order::Start(start())),
         order(6, Order::Stop(StopKind::Controlled)),
         order(7, Order::Reset),
+        order(8, Order::Cap { share: 0.4 }),
         Body::Trip(TripEvent { cause: Cause::StalledLoop }),
         Body::Note(Note::Malformed { count: 3, last: Text::cut("byte 4: protocol version 9") }),
         Body::Note(Note::EventsDropped { count: 1 }),

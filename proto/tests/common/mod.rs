@@ -111,6 +111,7 @@ fn requests() -> Vec<(&'static str, Envelope)> {
         ),
         ("status-request", envelope(0, M::StatusRequest(StatusRequest {}))),
         ("time-reply", envelope(10, M::TimeReply(reply))),
+        ("cap", envelope(15, M::Cap(Cap { share: 0.4 }))),
     ]
 }
 

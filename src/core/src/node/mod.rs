@@ -9,6 +9,7 @@
 //! | [`params`] | the node's numbers |
 //! | `clock`, `intake` | poses: senders' clocks, lease, freshness |
 //! | `orders` | start gates, stop, reset, plans, acknowledgements |
+//! | `tune` | what an operator changes while the machine runs |
 //! | `mode` | the mode table |
 //! | `successors` | plans that continue the one in force |
 //! | `carry` | the pose carried forward to the moment at which a command acts; jumps of the estimator |
@@ -28,6 +29,7 @@ pub mod params;
 mod run;
 mod successors;
 mod tick;
+mod tune;
 
 use crate::BUILD;
 use crate::geometry::Mount;

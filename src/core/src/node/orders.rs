@@ -62,6 +62,7 @@ impl Node {
                 Order::Start(start) => self.start(&start, sink).err(),
                 Order::Stop(_) => self.controlled_stop(sink).err(),
                 Order::Reset => self.reset(sink).err(),
+                Order::Cap { share } => self.cap(share).err(),
             },
         };
         if known.is_none() {

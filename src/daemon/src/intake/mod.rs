@@ -166,6 +166,7 @@ impl Intake {
             Message::Start(start) => self.order(from, Order::Start(start)),
             Message::Stop(stop) => self.order(from, Order::Stop(stop.stop)),
             Message::Reset(_) => self.order(from, Order::Reset),
+            Message::Cap(cap) => self.order(from, Order::Cap { share: cap.share }),
             Message::Subscribe(subscribe) => self.subscribe(from, subscribe),
             Message::JournalRequest(_) if from.peer.form == Form::Json => {
                 self.answer(from, message.kind(), "the journal is binary: ask for it in a binary datagram");

@@ -58,6 +58,7 @@ fn order(order: &Order) -> String {
         Order::Start(start) => format!("start of plan {}", start.plan),
         Order::Stop(kind) => format!("stop, {kind:?}").to_lowercase(),
         Order::Reset => "reset".to_string(),
+        Order::Cap { share } => format!("cap at {:.0} %", 100.0 * share),
     }
 }
 
@@ -82,6 +83,7 @@ fn ack(ack: &AckEffect) -> String {
         3 => "start",
         4 => "stop",
         5 => "reset",
+        10 => "cap",
         _ => "order",
     };
     match ack.refusal {
