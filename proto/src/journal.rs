@@ -66,6 +66,10 @@ pub enum Body {
     End(End),
     /// Effect: a plan that continues the one in force was taken and waits for its plan time.
     PlanWaits(PlanWaits),
+    /// Event: a law and its gains arrived.
+    Tune(TuneEvent),
+    /// Effect: another law, or other gains, are in force from now on.
+    LawChanged(LawChanged),
 }
 
 impl Body {
@@ -80,6 +84,7 @@ impl Body {
                 | Self::PoseRefused(_)
                 | Self::PlanLoaded(_)
                 | Self::PlanWaits(_)
+                | Self::LawChanged(_)
         )
     }
 
@@ -102,6 +107,8 @@ impl Body {
             Self::Gap(_) => "gap",
             Self::End(_) => "end",
             Self::PlanWaits(_) => "plan-waits",
+            Self::Tune(_) => "tune",
+            Self::LawChanged(_) => "law-changed",
         }
     }
 }
@@ -211,6 +218,24 @@ impl Order {
     }
 }
 
+/// A law and its gains as they arrived.
+#[derive(Clone, Debug, PartialEq, Eq, Encode, Decode, Serialize)]
+pub struct TuneEvent {
+    /// Session of the sender.
+    pub session: u64,
+    /// The sender's sequence number.
+    pub sequence: u64,
+    /// When it arrived, daemon's clock, ns.
+    pub received_ns: u64,
+    /// The law's text, as it came.
+    pub law: String,
+}
+
+impl TuneEvent {
+    /// The kind number of the message that carries it.
+    pub const KIND: u32 = 11;
+}
+
 /// The shell stopped the machine by itself; zero is already on the wire.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize)]
 pub struct TripEvent {
@@ -263,7 +288,7 @@ pub struct AckEffect {
     pub plan: Digest,
     /// Why it was refused; none if it was accepted.
     pub refusal: Option<Refusal>,
-    /// What is wrong with a refused plan, a line each.
+    /// What is wrong with a refused plan or law, a line each.
     pub findings: Vec<String>,
 }
 
@@ -323,6 +348,19 @@ pub struct PlanWaits {
     pub curvature_step_1_m: f64,
     /// Plans waiting from now on, this one included.
     pub waiting: u32,
+}
+
+/// A law that is in force from now on.
+#[derive(Clone, Debug, PartialEq, Encode, Decode, Serialize)]
+pub struct LawChanged {
+    /// Its name.
+    pub name: Text<32>,
+    /// Its gains as a JSON object, defaults filled in.
+    pub gains: String,
+    /// Its bandwidth across the path at the machine's top speed, rad/s.
+    pub bandwidth_rad_s: f64,
+    /// That speed, m/s.
+    pub speed_m_s: f64,
 }
 
 /// Numbers a recorder could not get.

@@ -10,7 +10,7 @@ use crate::words::{Cause, Mode};
 use bincode::{Decode, Encode};
 use serde::{Deserialize, Serialize};
 
-pub use crate::orders::{Cap, LEAST_SHARE, Reset, Start, Stop};
+pub use crate::orders::{Cap, LAW_BYTES, LEAST_SHARE, Reset, Start, Stop, Tune};
 
 /// Most bytes of a plan in one part.
 pub const PART_BYTES: usize = 1024;
@@ -257,7 +257,7 @@ pub struct Counters {
     pub poses: u64,
     /// Poses refused.
     pub poses_refused: u64,
-    /// Orders refused (start, stop, reset, cap).
+    /// Orders refused (start, stop, reset, cap, tune).
     pub orders_refused: u64,
     /// Plans refused.
     pub plans_refused: u64,
@@ -422,6 +422,7 @@ messages! {
     8 "status-request" StatusRequest,
     9 "time-reply" TimeReply,
     10 "cap" Cap: check::cap,
+    11 "tune" Tune,
     64 "ack" Ack: check::ack,
     65 "command" Command: check::command,
     66 "journal-part" JournalPart: check::journal_part,

@@ -1,6 +1,6 @@
 //! What an operator's program orders: the payloads of those messages.
 
-use crate::blob::{BootId, Digest};
+use crate::blob::{BootId, Digest, Text};
 use crate::words::{StartAt, StopKind};
 use bincode::{Decode, Encode};
 use serde::{Deserialize, Serialize};
@@ -45,4 +45,15 @@ pub const LEAST_SHARE: f64 = 0.05;
 pub struct Cap {
     /// The share, [`LEAST_SHARE`] to 1.
     pub share: f64,
+}
+
+/// Most bytes of a law's text.
+pub const LAW_BYTES: usize = 900;
+
+/// Changes the law and its gains, also while a plan is followed.
+#[derive(Clone, Copy, Debug, PartialEq, Encode, Decode, Serialize, Deserialize)]
+#[serde(deny_unknown_fields)]
+pub struct Tune {
+    /// The law and its gains as JSON: `{"name": NAME, "gains": {KEY: VALUE, …}}`; gains not named have their defaults.
+    pub law: Text<LAW_BYTES>,
 }

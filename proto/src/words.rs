@@ -325,6 +325,8 @@ pub enum Refusal {
     },
     /// A cap lies outside its bounds.
     CapOutOfRange,
+    /// A law cannot be built, or not for this machine; the findings say why.
+    LawUnfit,
 }
 
 impl Refusal {
@@ -359,6 +361,7 @@ impl Refusal {
             Self::TurnRateStep { .. } => "turn-rate-step",
             Self::CurvatureStep { .. } => "curvature-step",
             Self::CapOutOfRange => "cap-out-of-range",
+            Self::LawUnfit => "law-unfit",
         }
     }
 }
@@ -453,6 +456,7 @@ impl fmt::Display for Refusal {
                 step(f, at_ns, "curvature", step_1_m, limit_1_m, ("1/m", "joint_curvature_1_m"))
             }
             Self::CapOutOfRange => f.write_str("a cap is a share from 0.05 to 1: to stop the machine, order a stop"),
+            Self::LawUnfit => f.write_str("the law is not taken"),
         }
     }
 }

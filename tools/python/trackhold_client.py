@@ -20,6 +20,7 @@ SPDX-License-Identifier: MIT
 """
 
 import hashlib
+import json
 import math
 import secrets
 import socket
@@ -65,6 +66,7 @@ KINDS: Dict[str, Tuple[int, Tuple[Tuple[str, str], ...]]] = {
     "status-request": (8, ()),
     "time-reply": (9, (("request_sent_ns", "Q"), ("request_received_ns", "Q"), ("reply_sent_ns", "Q"))),
     "cap": (10, (("share", "d"),)),
+    "tune": (11, (("law", "text 900"),)),
     "ack": (64, (
         ("order_session", "Q"), ("order_sequence", "Q"), ("order_kind", "I"), ("accepted", "I"),
         ("plan", "hex 32"), ("text", "text 900"),
@@ -441,6 +443,12 @@ class Operator(Link):
         if not LEAST_SHARE <= share <= 1:
             raise ProtocolError(f"cap, field share: {share} is not {LEAST_SHARE} to 1")
         self._order("cap", {"share": share})
+
+    def tune(self, law: str, **gains: float) -> None:
+        """Changes the law and its gains, also while a plan is followed; gains not named have their defaults.
+
+        Raises Refused with the daemon's findings, or NoAnswer."""
+        self._order("tune", {"law": json.dumps({"name": law, "gains": gains})})
 
     def _order(self, kind: str, fields: Dict[str, Any], tries: int = 20, wait_s: float = 0.1) -> None:
         sequence = self.next_sequence()
