@@ -3,8 +3,8 @@
 use crate::codec::DecodeError;
 use crate::journal::MAX_PLAN_BYTES;
 use crate::message::{
-    Ack, Command, JournalGone, JournalPart, JournalRequest, PART_BYTES, PlanMissing, PlanPart, Pose, Status,
-    Subscribe, WANT_COMMANDS, WANT_JOURNAL, WANT_STATUS,
+    Ack, Cap, Command, JournalGone, JournalPart, JournalRequest, LEAST_SHARE, PART_BYTES, PlanMissing,
+    PlanPart, Pose, Status, Subscribe, WANT_COMMANDS, WANT_JOURNAL, WANT_STATUS,
 };
 
 type Checked = Result<(), DecodeError>;
@@ -39,6 +39,11 @@ pub(crate) fn plan_part(part: &PlanPart) -> Checked {
 
 pub(crate) fn plan_missing(missing: &PlanMissing) -> Checked {
     demand(missing.missing >= 1, "missing", "at least 1")
+}
+
+pub(crate) fn cap(cap: &Cap) -> Checked {
+    finite(&[("share", cap.share)])?;
+    demand((LEAST_SHARE..=1.0).contains(&cap.share), "share", "0.05 to 1")
 }
 
 pub(crate) fn subscribe(subscribe: &Subscribe) -> Checked {

@@ -23,6 +23,8 @@ pub mod header;
 pub mod journal;
 mod json;
 pub mod message;
+mod orders;
+mod tick;
 pub mod words;
 
 pub use codec::{DecodeError, Envelope};

@@ -6,9 +6,11 @@
 use crate::blob::{Blob, BootId, Digest, Text};
 use crate::check;
 use crate::codec::DecodeError;
-use crate::words::{Cause, Mode, StartAt, StopKind};
+use crate::words::{Cause, Mode};
 use bincode::{Decode, Encode};
 use serde::{Deserialize, Serialize};
+
+pub use crate::orders::{Cap, LAW_BYTES, LEAST_SHARE, Reset, Start, Stop, Tune};
 
 /// Most bytes of a plan in one part.
 pub const PART_BYTES: usize = 1024;
@@ -78,36 +80,6 @@ pub struct PlanPart {
     pub bytes: Blob<PART_BYTES>,
 }
 
-/// Sets the machine in motion. Moves nothing unless boot, plan and start number are those in force.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]
-#[serde(deny_unknown_fields)]
-pub struct Start {
-    /// The daemon's boot identity, from its status.
-    pub boot: BootId,
-    /// Digest of the plan to follow.
-    pub plan: Digest,
-    /// The one-time start number, from its status.
-    pub start_number: u64,
-    /// Where to begin.
-    pub at: StartAt,
-    /// Plan time to begin at where `at` is `plan-time`, ns; else 0.
-    #[serde(default)]
-    pub plan_time_ns: u64,
-}
-
-/// Stops the machine. A request, not a safety function.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]
-#[serde(deny_unknown_fields)]
-pub struct Stop {
-    /// Which kind.
-    pub stop: StopKind,
-}
-
-/// Leaves a latched stop for standby, once its cause is gone. Moves nothing.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]
-#[serde(deny_unknown_fields)]
-pub struct Reset {}
-
 /// Asks for streams, to be sent to where this came from, until the lease ends.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Encode, Decode, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
@@ -145,7 +117,7 @@ pub struct TimeReply {
     pub reply_sent_ns: u64,
 }
 
-/// The outcome of a plan, start, stop or reset.
+/// The outcome of a plan or an order.
 #[derive(Clone, Copy, Debug, PartialEq, Encode, Decode, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct Ack {
@@ -285,7 +257,7 @@ pub struct Counters {
     pub poses: u64,
     /// Poses refused.
     pub poses_refused: u64,
-    /// Orders refused (start, stop, reset).
+    /// Orders refused (start, stop, reset, cap, tune).
     pub orders_refused: u64,
     /// Plans refused.
     pub plans_refused: u64,
@@ -449,6 +421,8 @@ messages! {
     7 "journal-request" JournalRequest: check::journal_request,
     8 "status-request" StatusRequest,
     9 "time-reply" TimeReply,
+    10 "cap" Cap: check::cap,
+    11 "tune" Tune,
     64 "ack" Ack: check::ack,
     65 "command" Command: check::command,
     66 "journal-part" JournalPart: check::journal_part,

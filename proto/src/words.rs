@@ -323,6 +323,10 @@ pub enum Refusal {
         /// The greatest one allowed, 1/m.
         limit_1_m: f64,
     },
+    /// A cap lies outside its bounds.
+    CapOutOfRange,
+    /// A law cannot be built, or not for this machine; the findings say why.
+    LawUnfit,
 }
 
 impl Refusal {
@@ -356,6 +360,8 @@ impl Refusal {
             Self::SpeedStep { .. } => "speed-step",
             Self::TurnRateStep { .. } => "turn-rate-step",
             Self::CurvatureStep { .. } => "curvature-step",
+            Self::CapOutOfRange => "cap-out-of-range",
+            Self::LawUnfit => "law-unfit",
         }
     }
 }
@@ -449,6 +455,8 @@ impl fmt::Display for Refusal {
             Self::CurvatureStep { at_ns, step_1_m, limit_1_m } => {
                 step(f, at_ns, "curvature", step_1_m, limit_1_m, ("1/m", "joint_curvature_1_m"))
             }
+            Self::CapOutOfRange => f.write_str("a cap is a share from 0.05 to 1: to stop the machine, order a stop"),
+            Self::LawUnfit => f.write_str("the law is not taken"),
         }
     }
 }

@@ -111,6 +111,7 @@ fn largest() -> Vec<Envelope> {
     for sample in &mut all {
         match &mut sample.message {
             Message::Ack(ack) => ack.text = Text::cut(&"\u{1}".repeat(900)),
+            Message::Tune(tune) => tune.law = Text::cut(&"\u{1}".repeat(LAW_BYTES)),
             Message::Status(status) => status.plan_id = Text::cut(&"\u{1}".repeat(64)),
             Message::JournalPart(part) => part.bytes = Blob::new(&[0xff; JOURNAL_BYTES]).unwrap(),
             Message::PlanPart(part) => {

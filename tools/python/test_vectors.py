@@ -126,7 +126,7 @@ class TrackLog(unittest.TestCase):
 
     def test_the_golden_frames(self):
         data = (VECTORS / "journal-frames.bin").read_bytes()
-        self.assertEqual(sorted({body[0] for _, _, body in self.frames(data, 0)}), list(range(16)))
+        self.assertEqual(sorted({body[0] for _, _, body in self.frames(data, 0)}), list(range(18)))
 
 
 class CompactPlan(unittest.TestCase):
@@ -218,11 +218,19 @@ class Clients(unittest.TestCase):
                 with client.Operator(daemon.address) as operator:
                     operator.stop("controlled")
                     operator.reset()
+                    operator.cap(0.4)
+                    operator.tune("kanayama", k_y=9.0)
                     sessions.add(operator.session)
             got = daemon.got
         self.assertEqual(len(sessions), 2)
-        self.assertEqual([message.kind for message in got], ["stop", "reset"] * 2)
+        self.assertEqual([message.kind for message in got], ["stop", "reset", "cap", "tune"] * 2)
         self.assertLess(got[0].sequence, got[1].sequence)
+        self.assertEqual(got[2].fields, {"share": 0.4})
+        self.assertEqual(json.loads(got[3].fields["law"]), {"name": "kanayama", "gains": {"k_y": 9.0}})
+        with Daemon(lambda *_: None) as daemon, client.Operator(daemon.address) as operator:
+            for wrong in (0.04, 1.1, math.nan):
+                with self.assertRaisesRegex(client.ProtocolError, "share"):
+                    operator.cap(wrong)
 
     def test_a_start_quotes_the_status_and_a_refusal_is_told(self):
         status = json.loads((VECTORS / "status.json").read_text("utf-8"))

@@ -20,6 +20,7 @@ SPDX-License-Identifier: MIT
 """
 
 import hashlib
+import json
 import math
 import secrets
 import socket
@@ -33,12 +34,13 @@ HEADER = struct.Struct("<4sBBHQQQII")
 TAG_BYTES = 16
 MAX_DATAGRAM_BYTES = 1200
 PART_BYTES = 1024
+LEAST_SHARE = 0.05
 
 WORDS = {
     "mode": ("standby", "tracking", "controlled-stop", "protective-stop", "emergency-stop"),
     "cause": (
         "boot", "operator", "plan-ended", "not-settled", "plan-ran-dry", "ramp-ended", "stale-pose",
-        "outside-law-domain", "law-not-finite", "stalled-loop", "lost-trip", "shutdown",
+        "outside-law-domain", "law-not-finite", "stalled-loop", "lost-trip", "shutdown", "pose-jump",
     ),
     "stop-kind": ("emergency", "controlled"),
     "start-at": ("beginning", "plan-time", "nearest"),
@@ -63,6 +65,8 @@ KINDS: Dict[str, Tuple[int, Tuple[Tuple[str, str], ...]]] = {
     "journal-request": (7, (("first", "Q"), ("last", "Q"))),
     "status-request": (8, ()),
     "time-reply": (9, (("request_sent_ns", "Q"), ("request_received_ns", "Q"), ("reply_sent_ns", "Q"))),
+    "cap": (10, (("share", "d"),)),
+    "tune": (11, (("law", "text 900"),)),
     "ack": (64, (
         ("order_session", "Q"), ("order_sequence", "Q"), ("order_kind", "I"), ("accepted", "I"),
         ("plan", "hex 32"), ("text", "text 900"),
@@ -431,6 +435,20 @@ class Operator(Link):
     def reset(self) -> None:
         """Leaves a latched stop for standby; moves nothing. Raises Refused or NoAnswer."""
         self._order("reset", {})
+
+    def cap(self, share: float) -> None:
+        """Lets the plan's time run no faster than this share of its pace, 0.05 to 1, until the next cap.
+
+        Raises ProtocolError, Refused or NoAnswer."""
+        if not LEAST_SHARE <= share <= 1:
+            raise ProtocolError(f"cap, field share: {share} is not {LEAST_SHARE} to 1")
+        self._order("cap", {"share": share})
+
+    def tune(self, law: str, **gains: float) -> None:
+        """Changes the law and its gains, also while a plan is followed; gains not named have their defaults.
+
+        Raises Refused with the daemon's findings, or NoAnswer."""
+        self._order("tune", {"law": json.dumps({"name": law, "gains": gains})})
 
     def _order(self, kind: str, fields: Dict[str, Any], tries: int = 20, wait_s: float = 0.1) -> None:
         sequence = self.next_sequence()

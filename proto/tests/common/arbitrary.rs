@@ -218,6 +218,8 @@ pub(crate) fn any_message() -> BoxedStrategy<Message> {
         [whole(), whole(), whole()].prop_map(|[request_sent_ns, request_received_ns, reply_sent_ns]| {
             M::TimeReply(TimeReply { request_sent_ns, request_received_ns, reply_sent_ns })
         }),
+        (LEAST_SHARE..=1.0).prop_map(|share| M::Cap(Cap { share })),
+        text().prop_map(|law| M::Tune(Tune { law })),
         ack().prop_map(M::Ack),
         command().prop_map(M::Command),
         journal_part().prop_map(M::JournalPart),
@@ -253,7 +255,9 @@ fn any_refusal() -> BoxedStrategy<Refusal> {
             R::NoPose,
             R::PlanUnfit,
             R::SequenceReused,
-            R::OtherPlan
+            R::OtherPlan,
+            R::CapOutOfRange,
+            R::LawUnfit
         ]),
         [whole(), whole()].prop_map(|[age_ns, limit_ns]| R::StalePose { age_ns, limit_ns }),
         [number(), number()].prop_map(|[distance_m, limit_m]| R::TooFar { distance_m, limit_m }),
@@ -324,8 +328,12 @@ fn any_tick() -> BoxedStrategy<TickRecord> {
 }
 
 fn any_event() -> BoxedStrategy<Body> {
-    let order =
-        prop_oneof![start().prop_map(Order::Start), stop_kind().prop_map(Order::Stop), Just(Order::Reset)];
+    let order = prop_oneof![
+        start().prop_map(Order::Start),
+        stop_kind().prop_map(Order::Stop),
+        Just(Order::Reset),
+        number().prop_map(|share| Order::Cap { share }),
+    ];
     let note = prop_oneof![
         (whole(), text()).prop_map(|(count, last)| Note::Malformed { count, last }),
         whole().prop_map(|count| Note::EventsDropped { count }),
@@ -358,6 +366,9 @@ fn any_event() -> BoxedStrategy<Body> {
             Body::Order(OrderEvent { session, sequence, received_ns, order })
         }),
         cause().prop_map(|cause| Body::Trip(TripEvent { cause })),
+        ([whole(), whole(), whole()], ".*").prop_map(|([session, sequence, received_ns], law)| {
+            Body::Tune(TuneEvent { session, sequence, received_ns, law })
+        }),
         note.prop_map(Body::Note),
     ]
     .boxed()
@@ -385,9 +396,14 @@ pub(crate) fn any_body() -> BoxedStrategy<Body> {
                 waiting,
             })
         });
+    let changed = (text(), ".*", number(), number());
+    let changed = changed.prop_map(|(name, gains, bandwidth_rad_s, speed_m_s)| {
+        Body::LawChanged(LawChanged { name, gains, bandwidth_rad_s, speed_m_s })
+    });
     prop_oneof![
         3 => any_event(),
         1 => waits,
+        1 => changed,
         1 => any_tick().prop_map(Body::Tick),
         1 => ack,
         1 => command().prop_map(Body::Command),

@@ -88,6 +88,7 @@ fn events() -> Vec<Body> {
         order(5, Order::Start(start())),
         order(6, Order::Stop(StopKind::Controlled)),
         order(7, Order::Reset),
+        order(8, Order::Cap { share: 0.4 }),
         Body::Trip(TripEvent { cause: Cause::StalledLoop }),
         Body::Note(Note::Malformed { count: 3, last: Text::cut("byte 4: protocol version 9") }),
         Body::Note(Note::EventsDropped { count: 1 }),
@@ -125,6 +126,12 @@ pub(crate) fn bodies() -> Vec<Body> {
         curvature_step_1_m: 0.25,
         waiting: 2,
     };
+    let changed = LawChanged {
+        name: Text::cut("kanayama"),
+        gains: "{\"k_heading\":6.0,\"k_x\":1.5,\"k_y\":9.0}".into(),
+        bandwidth_rad_s: 4.5,
+        speed_m_s: 1.5,
+    };
     let mut all = events();
     all.extend([
         Body::Tick(tick()),
@@ -138,6 +145,8 @@ pub(crate) fn bodies() -> Vec<Body> {
         Body::Gap(Gap { first: 4, last: 1 << 53 }),
         Body::End(End { entries: 21, digest: Hex(counting(0x40)) }),
         Body::PlanWaits(waits),
+        Body::Tune(TuneEvent { session: u64::MAX, sequence: 11, received_ns: 45, law: super::LAW.into() }),
+        Body::LawChanged(changed),
     ]);
     all
 }

@@ -39,6 +39,9 @@ fn blob<const N: usize>(bytes: &[u8]) -> Blob<N> {
 /// The plan that the plan-part vectors carry.
 pub(crate) const PLAN: &str = "{\"id\":\"Hof Süd — Reihe 3\",\"revision\":4294967295}";
 
+/// The law that the tune vectors carry.
+pub(crate) const LAW: &str = "{\"name\":\"kanayama\",\"gains\":{\"k_x\":1.5,\"k_y\":9,\"k_heading\":6}}";
+
 /// Fixed messages: at least one of every kind, named kind or kind.variant.
 pub(crate) fn samples() -> Vec<(&'static str, Envelope)> {
     let mut all = requests();
@@ -111,6 +114,8 @@ fn requests() -> Vec<(&'static str, Envelope)> {
         ),
         ("status-request", envelope(0, M::StatusRequest(StatusRequest {}))),
         ("time-reply", envelope(10, M::TimeReply(reply))),
+        ("cap", envelope(15, M::Cap(Cap { share: 0.4 }))),
+        ("tune", envelope(16, M::Tune(Tune { law: Text::cut(LAW) }))),
     ]
 }
 

@@ -93,7 +93,21 @@ pub struct Checked {
     pub thresholds: Thresholds,
 }
 
+/// What laws are built for.
+fn law_context(vehicle: &Arc<dyn Vehicle>, params: &Params) -> law::Context {
+    law::Context {
+        vehicle: Arc::clone(vehicle),
+        period_s: params.period_s(),
+        dead_time_s: params.dead_time.seconds(),
+    }
+}
+
 impl Checked {
+    /// What a law is built for.
+    pub fn context(&self) -> law::Context {
+        law_context(&self.vehicle, &self.params)
+    }
+
     /// What a plan has to fit.
     pub fn terms(&self) -> Terms {
         Terms {
@@ -122,11 +136,7 @@ impl Settings {
             node.as_ref().and_then(|node| Params::new(node).map_err(|more| within("node", more)).ok());
         let law = match (&vehicle, &params) {
             (Some((vehicle, _)), Some(params)) => {
-                let context = law::Context {
-                    vehicle: Arc::clone(vehicle),
-                    period_s: params.period_s(),
-                    dead_time_s: params.dead_time.seconds(),
-                };
+                let context = law_context(vehicle, params);
                 law::build(&self.law.name, &self.law.gains, &context).map_err(|more| within("law", more)).ok()
             }
             // Without a machine none can be built, but what is wrong with its gains can be told already.

@@ -1,5 +1,6 @@
 //! Puts the daemon's parts together: who holds which end of which queue.
 
+use crate::builder::LawWorker;
 use crate::clock;
 use crate::control::Loop;
 use crate::gate::Gate;
@@ -24,9 +25,12 @@ use std::thread::JoinHandle;
 use trackhold_core::settings::Checked;
 use trackhold_core::time::SpanNs;
 use trackhold_proto::blob::{BootId, Hex};
+use trackhold_proto::journal::TuneEvent;
 
 /// Whole plans that wait for the worker.
 const PLAN_JOBS: usize = 4;
+/// Tunes that wait for the worker.
+const TUNE_JOBS: usize = 4;
 
 /// What tells this life of the daemon from every other.
 #[derive(Clone, Copy, Debug)]
@@ -105,6 +109,8 @@ pub(crate) struct Parts {
     pub(crate) publisher: Publisher,
     pub(crate) worker: Worker,
     pub(crate) whole_plans: Receiver<Whole>,
+    pub(crate) law_worker: LawWorker,
+    pub(crate) tunes: Receiver<TuneEvent>,
     pub(crate) supervisor: Supervisor,
 }
 
@@ -121,6 +127,7 @@ impl Parts {
         let (inlets, outlets, ends) = lanes();
         let (mail, letters) = Mail::new(Arc::clone(publisher_bell), Arc::clone(shared));
         let (jobs, whole_plans) = sync_channel(PLAN_JOBS);
+        let (tune_jobs, tunes) = sync_channel(TUNE_JOBS);
         let drawn = (identity.boot, identity.seed);
         let outward = (outlets, Arc::clone(publisher_bell));
         let control = Loop::new(
@@ -158,11 +165,18 @@ impl Parts {
             mail: mail.clone(),
             shared: Arc::clone(shared),
         };
+        let law_worker = LawWorker {
+            context: checked.context(),
+            laws: ends.laws,
+            bell: Arc::clone(loop_bell),
+            shared: Arc::clone(shared),
+        };
         let bell = Arc::clone(loop_bell);
-        let intake_ends =
-            Ends { stream: ends.stream, orders: ends.orders, drives: ends.drives, jobs, mail, bell };
+        let (stream, orders, drives) = (ends.stream, ends.orders, ends.drives);
+        let intake_ends = Ends { stream, orders, drives, jobs, tune_jobs, mail, bell };
         let intake =
             Intake::new(intake_ends, outlet, Arc::clone(zero), Arc::clone(shared), site.net.max_plan_bytes);
-        Ok((Self { control, intake, publisher, worker, whole_plans, supervisor }, ends.shutdown_trips))
+        let parts = Self { control, intake, publisher, worker, whole_plans, law_worker, tunes, supervisor };
+        Ok((parts, ends.shutdown_trips))
     }
 }

@@ -17,6 +17,7 @@ use std::os::fd::AsFd;
 use std::sync::Arc;
 use std::sync::atomic::Ordering::SeqCst;
 use trackhold_core::keys::Problem;
+use trackhold_core::node::tuning::Tuning;
 use trackhold_core::node::{Event, Node, Sink};
 use trackhold_core::plan::Plan;
 use trackhold_core::settings::Settings;
@@ -148,10 +149,14 @@ impl Loop {
             let Ok(item) = self.inlets.orders.pop() else { break };
             self.take(clock(), item.event, item.ticket);
         }
+        if let Ok(event) = self.inlets.laws.pop() {
+            self.take(clock(), event, None);
+        }
         if let Ok(event) = self.inlets.plans.pop() {
             self.take(clock(), event, None);
         }
-        !(self.inlets.orders.is_empty() && self.inlets.plans.is_empty() && self.no_trips())
+        let Inlets { orders, laws, plans, .. } = &self.inlets;
+        !(orders.is_empty() && laws.is_empty() && plans.is_empty() && self.no_trips())
     }
 
     fn no_trips(&self) -> bool {
@@ -234,7 +239,8 @@ impl Sink for Outbox {
         }
         if let Err(rtrb::PushError::Full(entry)) = self.outlets.entries.push(entry) {
             count(&self.shared.entries_lost);
-            if matches!(entry.body, Body::Plan(_) | Body::Ack(_)) {
+            // Those that hold memory.
+            if matches!(entry.body, Body::Plan(_) | Body::Ack(_) | Body::Tune(_) | Body::LawChanged(_)) {
                 self.discard(Waste::Entry(entry));
             }
         }
@@ -242,6 +248,10 @@ impl Sink for Outbox {
 
     fn retire(&mut self, plan: Box<Plan>) {
         self.discard(Waste::Plan(plan));
+    }
+
+    fn retire_law(&mut self, law: Box<Tuning>) {
+        self.discard(Waste::Law(law));
     }
 }
 

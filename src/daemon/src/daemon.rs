@@ -4,7 +4,8 @@
 //! | --- | --- | --- |
 //! | control | the node, on its grid of ticks | its timer and its bell |
 //! | intake | receives, decodes, routes; zero past the loop on an emergency stop | the socket |
-//! | plan worker | digests, compiles and frees plans | jobs, room in its queue |
+//! | plan worker | digests and compiles plans; frees what the loop is done with | jobs, room in its queue |
+//! | law worker | builds laws | jobs, room in its queue |
 //! | supervisor | zero past the loop when ticks are missing | time |
 //! | publisher | journal, outcomes, status | entries, letters |
 
@@ -110,13 +111,17 @@ impl Daemon {
     }
 
     fn start_threads(&mut self, parts: Parts, net: &Net) -> std::io::Result<()> {
-        let Parts { control, intake, publisher, worker, whole_plans, supervisor } = parts;
+        let Parts { control, intake, publisher, worker, whole_plans, law_worker, tunes, supervisor } = parts;
         let (common, net) = (self.common.clone(), net.clone());
         let priority = net.realtime_priority;
         let bell = Arc::clone(&common.publisher_bell);
         self.others.push(common.spawn("publisher", move || publisher.run(&bell))?);
         self.others.push(common.spawn("plan worker", move || {
             worker.run(&whole_plans);
+            Ok(())
+        })?);
+        self.others.push(common.spawn("law worker", move || {
+            law_worker.run(&tunes);
             Ok(())
         })?);
         let end = Arc::clone(&self.end_intake);

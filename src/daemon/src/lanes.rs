@@ -3,6 +3,7 @@
 //! ```text
 //! intake ── poses, notes ─▶┐                     ┌─▶ entries ──▶ publisher
 //!        ── orders ───────▶│                     │
+//! law worker ─── laws ────▶│                     │
 //! plan worker ── plans ───▶│ control loop ───────┼─▶ waste ────▶ plan worker (frees it)
 //! supervisor ── trips ────▶│                     │
 //! shutdown ──── trips ────▶┘                     └─▶ commands ─▶ drives
@@ -15,12 +16,13 @@ use nix::errno::Errno;
 use nix::poll::{PollFd, PollFlags, ppoll};
 use nix::sys::eventfd::{EfdFlags, EventFd};
 use nix::sys::time::TimeSpec;
-use rtrb::{Consumer, Producer, RingBuffer};
+use rtrb::{Consumer, Producer, PushError, RingBuffer};
 use std::net::SocketAddr;
 use std::os::fd::{AsFd, BorrowedFd};
 use std::sync::atomic::{AtomicBool, AtomicU32, AtomicU64, Ordering::SeqCst};
 use std::time::Duration;
 use trackhold_core::node::Event;
+use trackhold_core::node::tuning::Tuning;
 use trackhold_core::plan::Plan;
 use trackhold_proto::journal::Entry;
 
@@ -34,6 +36,7 @@ pub type Drives = [Option<SocketAddr>; MAX_DRIVES];
 const STREAM_ITEMS: usize = 1024;
 const ORDER_ITEMS: usize = 64;
 const PLAN_ITEMS: usize = 4;
+const LAW_ITEMS: usize = 4;
 const TRIP_ITEMS: usize = 8;
 const DRIVE_ITEMS: usize = 8;
 /// Entries on their way to the publisher: four seconds at 1 kHz with a pose a tick.
@@ -55,6 +58,8 @@ pub struct Item {
 pub enum Waste {
     /// A plan that was replaced or not taken.
     Plan(Box<Plan>),
+    /// A law that was replaced or not taken.
+    Law(Box<Tuning>),
     /// An entry that found its queue full.
     Entry(Entry),
 }
@@ -68,6 +73,7 @@ pub struct Inlets {
     pub stream: Consumer<Event>,
     pub orders: Consumer<Item>,
     pub plans: Consumer<Event>,
+    pub laws: Consumer<Event>,
     pub drives: Consumer<Drives>,
 }
 
@@ -88,6 +94,7 @@ pub struct OtherEnds {
     pub stream: Producer<Event>,
     pub orders: Producer<Item>,
     pub plans: Producer<Event>,
+    pub laws: Producer<Event>,
     pub drives: Producer<Drives>,
     pub entries: Consumer<Entry>,
     pub waste: Consumer<Waste>,
@@ -105,11 +112,12 @@ pub fn lanes_with(entry_items: usize) -> (Inlets, Outlets, OtherEnds) {
     let (stream_in, stream) = RingBuffer::new(STREAM_ITEMS);
     let (orders_in, orders) = RingBuffer::new(ORDER_ITEMS);
     let (plans_in, plans) = RingBuffer::new(PLAN_ITEMS);
+    let (laws_in, laws) = RingBuffer::new(LAW_ITEMS);
     let (drives_in, drives) = RingBuffer::new(DRIVE_ITEMS);
     let (entries, entries_out) = RingBuffer::new(entry_items);
     let (waste, waste_out) = RingBuffer::new(WASTE_ITEMS);
     (
-        Inlets { supervisor_trips, shutdown_trips, stream, orders, plans, drives },
+        Inlets { supervisor_trips, shutdown_trips, stream, orders, plans, laws, drives },
         Outlets { entries, waste },
         OtherEnds {
             supervisor_trips: supervisor_trips_in,
@@ -117,6 +125,7 @@ pub fn lanes_with(entry_items: usize) -> (Inlets, Outlets, OtherEnds) {
             stream: stream_in,
             orders: orders_in,
             plans: plans_in,
+            laws: laws_in,
             drives: drives_in,
             entries: entries_out,
             waste: waste_out,
@@ -166,6 +175,21 @@ impl Bell {
 impl AsFd for Bell {
     fn as_fd(&self) -> BorrowedFd<'_> {
         self.0.as_fd()
+    }
+}
+
+/// How long to wait before trying a full queue again.
+const RETRY: Duration = Duration::from_millis(1);
+
+/// Pushes what a worker has made. A worker may wait for room; the loop never does.
+pub fn push_patiently(queue: &mut Producer<Event>, event: Event, shared: &Shared) {
+    let mut event = event;
+    while let Err(PushError::Full(back)) = queue.push(event) {
+        if shared.shell_ends.load(SeqCst) {
+            return;
+        }
+        event = back;
+        std::thread::sleep(RETRY);
     }
 }
 

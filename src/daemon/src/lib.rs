@@ -8,7 +8,7 @@
 //! | [`zero`] | zero past the loop |
 //! | [`control`] | the control loop |
 //! | [`intake`] | what comes in: datagrams, leases, plan transfers |
-//! | [`worker`] | compiles plans |
+//! | [`worker`], [`builder`] | compile plans, build laws |
 //! | [`publish`] | journal, outcomes and status going out |
 //! | [`supervisor`], [`guard`] | what stops the machine when the loop stalls or a thread panics |
 //! | [`lanes`], [`mail`] | queues, bells and counters between the threads |
@@ -17,6 +17,7 @@
 //! | [`Daemon`] | all of it, started and ended |
 
 mod assembly;
+pub mod builder;
 pub mod clock;
 pub mod control;
 mod daemon;

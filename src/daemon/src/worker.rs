@@ -1,11 +1,10 @@
 //! The plan worker: checks a plan's digest, compiles it, checks that it is fit, and frees what the loop is done with. Nothing waits for it.
 
 use crate::intake::transfer::Whole;
-use crate::lanes::{Bell, Shared, Waste};
+use crate::lanes::{Bell, Shared, Waste, push_patiently};
 use crate::mail::{Letter, Mail, OrderKey};
-use rtrb::{Consumer, Producer, PushError};
+use rtrb::{Consumer, Producer};
 use std::sync::Arc;
-use std::sync::atomic::Ordering::SeqCst;
 use std::sync::mpsc::{Receiver, RecvTimeoutError};
 use std::time::Duration;
 use trackhold_core::digest;
@@ -17,8 +16,6 @@ use trackhold_proto::journal::PlanEvent;
 pub const PLAN_KIND: u32 = 2;
 /// How often the loop's waste is freed while no plan comes.
 const SWEEP: Duration = Duration::from_millis(50);
-/// How long to wait before trying a full queue again.
-const RETRY: Duration = Duration::from_millis(1);
 
 /// The worker.
 #[derive(Debug)]
@@ -64,19 +61,8 @@ impl Worker {
             return;
         }
         let compiled = admit(&raw, &self.terms).map(Box::new);
-        self.push(Event::Plan(PlanEvent { session, sequence, digest, raw }, compiled));
-    }
-
-    /// The worker may wait for room; the loop never does.
-    fn push(&mut self, event: Event) {
-        let mut event = event;
-        while let Err(PushError::Full(back)) = self.plans.push(event) {
-            if self.shared.shell_ends.load(SeqCst) {
-                return;
-            }
-            event = back;
-            std::thread::sleep(RETRY);
-        }
+        let event = Event::Plan(PlanEvent { session, sequence, digest, raw }, compiled);
+        push_patiently(&mut self.plans, event, &self.shared);
         self.bell.ring();
     }
 }

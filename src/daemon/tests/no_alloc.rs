@@ -14,10 +14,11 @@ use trackhold::site::Site;
 use trackhold::zero::Outlet;
 use trackhold_core::digest;
 use trackhold_core::node::Event;
+use trackhold_core::node::tuning::Tuning;
 use trackhold_core::plan::compile;
 use trackhold_core::time::TimeNs;
 use trackhold_proto::blob::Hex;
-use trackhold_proto::journal::{Body, Entry, Order, OrderEvent, PlanEvent, PoseEvent};
+use trackhold_proto::journal::{Body, Entry, Order, OrderEvent, PlanEvent, PoseEvent, TuneEvent};
 use trackhold_proto::message::{Pose, Start};
 use trackhold_proto::words::{Cause, Mode, StartAt, StopKind};
 use trackhold_proto::{Envelope, Message};
@@ -64,6 +65,8 @@ const SITE: &str = "[vehicle]\nkind = \"differential\"\nwheel_radius_m = 0.1\ntr
                     [node]\nrate_hz = 1000\nplanner_lease_s = 0\n";
 const PERIOD_NS: u64 = 1_000_000;
 const BEGIN_NS: u64 = 1_000_000_000;
+
+const SAMSON: &str = r#"{"name":"samson","gains":{"k_1":2,"k_2":9,"k_3":6}}"#;
 
 /// A loop, everybody else's ends, and a drive's socket.
 struct Bench {
@@ -148,6 +151,12 @@ impl Bench {
         self.ends.plans.push(Event::Plan(event, compiled)).unwrap();
     }
 
+    fn tune(&mut self, sequence: u64, law: &str) {
+        let built = Tuning::build(law, self.control.node().law_context());
+        let event = TuneEvent { session: 2, sequence, received_ns: self.now, law: law.to_owned() };
+        self.ends.laws.push(Event::Tune(event, built)).unwrap();
+    }
+
     fn drain(&mut self) -> Vec<Entry> {
         while self.ends.waste.pop().is_ok() {}
         std::iter::from_fn(|| self.ends.entries.pop().ok()).collect()
@@ -169,7 +178,7 @@ impl Bench {
 #[test]
 fn thousands_of_ticks_with_poses_orders_and_plans_neither_allocate_nor_free() {
     let mut bench = Bench::new(8192);
-    let (mut tracked, mut loaded) = (0, 0);
+    let (mut tracked, mut loaded, mut laws) = (0, 0, 0);
     let speed = |k: u64| 0.3 + 0.0001 * (k / 600) as f64;
     for k in 0..6000_u64 {
         bench.pose(k, 0.0005 * (k % 600) as f64);
@@ -184,6 +193,14 @@ fn thousands_of_ticks_with_poses_orders_and_plans_neither_allocate_nor_free() {
                 let start = Start { boot, plan, start_number, at: StartAt::Beginning, plan_time_ns: 0 };
                 bench.order(k, Order::Start(start));
             }
+            // Caps and laws: good ones, one sent again, one that is not fit, and one that the plan does not fit.
+            100 => bench.order(k, Order::Cap { share: 0.6 }),
+            110 => bench.tune(k, SAMSON),
+            112 => bench.tune(k - 2, SAMSON),
+            115 => bench.tune(k, r#"{"name":"kanayama","gains":{"k_q":1}}"#),
+            120 => bench.tune(k, r#"{"name":"off-axle","gains":{"x_p_m":-0.3}}"#),
+            150 => bench.order(k, Order::Cap { share: 1.0 }),
+            180 => bench.tune(k, r#"{"name":"kanayama","gains":{"k_y":9}}"#),
             200 => bench.plan(k, 0.4),
             205 => bench.plan(k, 30.0),
             // Two that wait and take over, the second of them one that takes the place of a third, and one that steps.
@@ -207,9 +224,11 @@ fn thousands_of_ticks_with_poses_orders_and_plans_neither_allocate_nor_free() {
             entries.iter().map(|entry| entry.body.name()).collect::<Vec<_>>()
         );
         tracked += usize::from(bench.control.node().mode() == Mode::Tracking);
+        laws += entries.iter().filter(|entry| matches!(entry.body, Body::LawChanged(_))).count();
         loaded += entries.iter().filter(|entry| matches!(entry.body, Body::PlanLoaded(_))).count();
     }
     assert!(tracked > 3000 && loaded == 30, "{tracked} ticks tracking, {loaded} plans loaded");
+    assert_eq!(laws, 20, "two laws a round");
     assert_eq!((bench.shared.entries_lost.load(SeqCst), bench.shared.ticks_late.load(SeqCst)), (0, 0));
 }
 
@@ -220,11 +239,16 @@ fn a_full_journal_queue_is_counted_and_shows_as_a_gap_in_the_numbers() {
         bench.pose(k, 0.0);
         if k == 50 {
             bench.plan(k, 0.3);
+            bench.tune(k, SAMSON);
         }
         assert_eq!(bench.turn(), 0, "turn {k}");
     }
     let lost = bench.shared.entries_lost.load(SeqCst);
-    assert!(matches!(bench.ends.waste.pop(), Ok(Waste::Entry(Entry { body: Body::Plan(_), .. }))));
+    let waste: Vec<_> = std::iter::from_fn(|| bench.ends.waste.pop().ok()).collect();
+    let holds = |name: &str| {
+        waste.iter().any(|item| matches!(item, Waste::Entry(entry) if entry.body.name() == name))
+    };
+    assert!(holds("plan") && holds("tune") && holds("law-changed"), "{waste:?}");
     let kept = bench.drain();
     assert_eq!(kept.len(), 16);
     assert_eq!(kept.last().map(|entry| entry.number), Some(15));

@@ -45,6 +45,8 @@ pub enum Command {
     Stop(orders::StopArgs),
     /// Leaves a latched stop; moves nothing.
     Reset(orders::ResetArgs),
+    /// Caps the speed in percent of the plan's, also while the machine runs.
+    Cap(orders::CapArgs),
     /// A daemon's journal into a track log.
     Record(record::Args),
     /// A daemon's journal as it comes, a line a tick.
@@ -70,6 +72,7 @@ impl Command {
             Self::Start(args) => orders::run_start(&args),
             Self::Stop(args) => orders::run_stop(&args),
             Self::Reset(args) => orders::run_reset(&args),
+            Self::Cap(args) => orders::run_cap(&args),
             Self::Record(args) => record::run(&args),
             Self::Tail(args) => tail::run(&args),
         }

@@ -1,7 +1,9 @@
-//! `fieldbook send-plan`, `start`, `stop`, `reset`: orders to a daemon, repeated until their outcome is known.
+//! `fieldbook send-plan`, `start`, `stop`, `reset`, `cap`: orders to a daemon, repeated until their outcome is known.
 
+mod cap;
 mod transfer;
 
+pub use cap::{CapArgs, cap, run_cap};
 pub use transfer::send_plan;
 
 use crate::client::{Answer, Client, DEFAULT_ADDRESS, Pace};

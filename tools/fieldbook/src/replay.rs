@@ -18,6 +18,7 @@ use std::process::ExitCode;
 use thiserror::Error;
 use trackhold_core::BUILD;
 use trackhold_core::digest::ResultDigest;
+use trackhold_core::node::tuning::Tuning;
 use trackhold_core::node::{Event, Node};
 use trackhold_core::plan::check::admit;
 use trackhold_core::settings::Settings;
@@ -239,6 +240,10 @@ impl Replay {
                 Some(Event::Plan(event.clone(), compiled))
             }
             Body::Order(event) => Some(Event::Order(*event)),
+            Body::Tune(event) => {
+                let built = Tuning::build(&event.law, self.node.law_context());
+                Some(Event::Tune(event.clone(), built))
+            }
             Body::Trip(event) => Some(Event::Trip(*event)),
             Body::Note(note) => Some(Event::Note(*note)),
             Body::Tick(_) => Some(Event::Tick),

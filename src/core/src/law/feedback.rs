@@ -72,13 +72,12 @@ impl Feedback {
         &*self.law
     }
 
-    /// Puts another law in the old one's place, and returns that one. What the new one adds to the reference's motion
-    /// begins with what the old one added.
-    pub fn replace(&mut self, law: Box<dyn Law>, motion: BodyVelocity) -> Box<dyn Law> {
-        let old = core::mem::replace(&mut self.law, law);
+    /// Exchanges the law in force for another one. What the new one adds to the reference's motion begins with what the old
+    /// one added.
+    pub fn exchange(&mut self, law: &mut Box<dyn Law>, motion: BodyVelocity) {
+        core::mem::swap(&mut self.law, law);
         self.law.reset(motion);
         self.blend.begin();
-        old
     }
 
     /// A run begins with the machine in this motion: what was before is forgotten.

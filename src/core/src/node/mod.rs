@@ -9,6 +9,8 @@
 //! | [`params`] | the node's numbers |
 //! | `clock`, `intake` | poses: senders' clocks, lease, freshness |
 //! | `orders` | start gates, stop, reset, plans, acknowledgements |
+//! | `tune` | what an operator changes while the machine runs |
+//! | [`tuning`] | from a tune's text to a law |
 //! | `mode` | the mode table |
 //! | `successors` | plans that continue the one in force |
 //! | `carry` | the pose carried forward to the moment at which a command acts; jumps of the estimator |
@@ -28,11 +30,13 @@ pub mod params;
 mod run;
 mod successors;
 mod tick;
+mod tune;
+pub mod tuning;
 
 use crate::BUILD;
 use crate::geometry::Mount;
 use crate::keys::Problem;
-use crate::law::Feedback;
+use crate::law::{Context, Feedback, Law};
 use crate::plan::Plan;
 use crate::plan::check::Terms;
 use crate::settings::Settings;
@@ -52,10 +56,11 @@ use successors::Successors;
 use trackhold_proto::blob::BootId;
 use trackhold_proto::journal::{
     Body, Boot, Entry, ExchangeEvent, ModeChange, Note, OrderEvent, PlanEvent, PoseEvent, PoseRefused,
-    TripEvent,
+    TripEvent, TuneEvent,
 };
 use trackhold_proto::message::Command;
 use trackhold_proto::words::{Cause, Mode};
+use tuning::Tuning;
 
 /// What goes into the node.
 #[derive(Debug)]
@@ -70,6 +75,8 @@ pub enum Event {
     Plan(PlanEvent, Result<Box<Plan>, Vec<String>>),
     /// An order arrived.
     Order(OrderEvent),
+    /// A law arrived, with what [`Tuning::build`] made of its text for this node's machine.
+    Tune(TuneEvent, Result<Box<Tuning>, Vec<String>>),
     /// The shell stopped the machine by itself; zero is on the wire already.
     Trip(TripEvent),
     /// Something the shell measured: numbered, without influence.
@@ -85,6 +92,11 @@ pub trait Sink {
     fn retire(&mut self, plan: Box<Plan>) {
         drop(plan);
     }
+
+    /// Takes a law that is not needed any more, to be freed where that may take its time.
+    fn retire_law(&mut self, law: Box<Tuning>) {
+        drop(law);
+    }
 }
 
 impl Sink for Vec<Entry> {
@@ -99,6 +111,8 @@ pub struct Node {
     boot: BootId,
     vehicle: Arc<dyn Vehicle>,
     feedback: Feedback,
+    /// What laws are built for.
+    context: Context,
     mount: Mount,
     params: Params,
     terms: Terms,
@@ -157,11 +171,12 @@ impl Node {
     ) -> Result<Self, Vec<Problem>> {
         let checked = settings.checked()?;
         let begin = Boot { boot, seed, settings: checked.settings.to_json(), build: BUILD.to_string() };
-        let terms = checked.terms();
+        let (terms, context) = (checked.terms(), checked.context());
         let mut node = Self {
             boot,
             feedback: Feedback::new(checked.law, Arc::clone(&checked.vehicle), checked.params.feedback()),
             vehicle: checked.vehicle,
+            context,
             mount: checked.mount,
             terms,
             at,
@@ -198,6 +213,7 @@ impl Node {
             }
             Event::Plan(event, compiled) => self.plan_arrived(event, compiled, sink),
             Event::Order(event) => self.order(event, sink),
+            Event::Tune(event, built) => self.tune(event, built, sink),
             Event::Trip(event) => self.trip(event, sink),
             Event::Note(note) => self.emit(Body::Note(note), sink),
         }
@@ -241,6 +257,16 @@ impl Node {
     /// What a plan has to fit to be taken: see [`crate::plan::check::admit`].
     pub fn terms(&self) -> &Terms {
         &self.terms
+    }
+
+    /// What a law is built for, to be put in force by [`Event::Tune`].
+    pub fn law_context(&self) -> &Context {
+        &self.context
+    }
+
+    /// The law in force.
+    pub fn law(&self) -> &dyn Law {
+        self.feedback.law()
     }
 
     /// The node's numbers.

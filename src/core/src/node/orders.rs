@@ -29,22 +29,37 @@ pub(super) struct OrderMemory {
 }
 
 #[derive(Clone, Copy, Debug)]
-struct Remembered {
+pub(super) struct Remembered {
     session: u64,
     sequence: u64,
-    order: Order,
+    given: Given,
     refusal: Option<Refusal>,
 }
 
+/// What was ordered, as far as a repetition has to be the same.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub(super) enum Given {
+    /// One of the short orders.
+    Order(Order),
+    /// A law, by the digest of its text.
+    Tune(Digest),
+}
+
+impl Remembered {
+    /// What is answered where this order's number comes again, with `given`.
+    pub(super) fn outcome_of(&self, given: &Given) -> Option<Refusal> {
+        if self.given == *given { self.refusal } else { Some(Refusal::SequenceReused) }
+    }
+}
+
 impl OrderMemory {
-    fn find(&self, event: &OrderEvent) -> Option<Remembered> {
-        let same = |slot: &&Remembered| slot.session == event.session && slot.sequence == event.sequence;
+    pub(super) fn find(&self, session: u64, sequence: u64) -> Option<Remembered> {
+        let same = |slot: &&Remembered| slot.session == session && slot.sequence == sequence;
         self.slots.iter().flatten().find(same).copied()
     }
 
-    fn keep(&mut self, event: &OrderEvent, refusal: Option<Refusal>) {
-        let OrderEvent { session, sequence, order, .. } = *event;
-        self.slots[self.next] = Some(Remembered { session, sequence, order, refusal });
+    pub(super) fn keep(&mut self, session: u64, sequence: u64, given: Given, refusal: Option<Refusal>) {
+        self.slots[self.next] = Some(Remembered { session, sequence, given, refusal });
         self.next = (self.next + 1) % REMEMBERED;
     }
 }
@@ -52,23 +67,24 @@ impl OrderMemory {
 impl Node {
     pub(super) fn order(&mut self, event: OrderEvent, sink: &mut impl Sink) {
         self.emit(Body::Order(event), sink);
-        let known = self.orders.find(&event);
+        let (session, sequence, given) = (event.session, event.sequence, Given::Order(event.order));
+        let known = self.orders.find(session, sequence);
         let refusal = match known {
             // An emergency stop always acts: it is harmless twice, and the shell has sent zero already.
             _ if event.order == Order::Stop(StopKind::Emergency) => self.emergency_stop(sink),
-            Some(known) if known.order == event.order => known.refusal,
-            Some(_) => Some(Refusal::SequenceReused),
+            Some(known) => known.outcome_of(&given),
             None => match event.order {
                 Order::Start(start) => self.start(&start, sink).err(),
                 Order::Stop(_) => self.controlled_stop(sink).err(),
                 Order::Reset => self.reset(sink).err(),
+                Order::Cap { share } => self.cap(share).err(),
             },
         };
         if known.is_none() {
-            self.orders.keep(&event, refusal);
+            self.orders.keep(session, sequence, given, refusal);
         }
         let plan = if let Order::Start(start) = event.order { start.plan } else { Digest::NONE };
-        let (session, sequence, order_kind) = (event.session, event.sequence, event.order.kind());
+        let order_kind = event.order.kind();
         self.emit(
             Body::Ack(AckEffect { session, sequence, order_kind, plan, refusal, findings: Vec::new() }),
             sink,
@@ -114,10 +130,13 @@ impl Node {
             None if matches!(self.mode, Mode::Tracking | Mode::ControlledStop) => {
                 Err(Refusal::Mode { mode: self.mode })
             }
-            None => {
-                self.load(plan, sink);
-                return Ok(());
-            }
+            None => match self.admit_direction(&plan) {
+                Err(refusal) => Err(refusal),
+                Ok(()) => {
+                    self.load(plan, sink);
+                    return Ok(());
+                }
+            },
         };
         let Ok(Some((at, step))) = admitted else {
             sink.retire(plan);
@@ -140,11 +159,18 @@ impl Node {
     fn admit_successor(&self, plan: &Plan, at: SpanNs) -> Result<JointStep, Refusal> {
         let nothing = Refusal::NothingToContinue { mode: self.mode };
         let in_force = self.plan.as_deref().filter(|_| self.mode == Mode::Tracking).ok_or(nothing)?;
-        if let Some(reverse) = self.feedback.law().domain().unfit_direction(plan.travel()) {
-            return Err(Refusal::LawDirection { reverse });
-        }
+        self.admit_direction(plan)?;
         let reached = self.run.plan_time();
         self.successors.admit(plan, at, (in_force, reached), &*self.vehicle, &self.params)
+    }
+
+    /// Whether the law in force can follow a plan in its directions. Looked at here and not where the plan is compiled,
+    /// because the law may change meanwhile.
+    fn admit_direction(&self, plan: &Plan) -> Result<(), Refusal> {
+        match self.feedback.law().domain().unfit_direction(plan.travel()) {
+            Some(reverse) => Err(Refusal::LawDirection { reverse }),
+            None => Ok(()),
+        }
     }
 
     fn load(&mut self, plan: Box<Plan>, sink: &mut impl Sink) {
@@ -194,10 +220,7 @@ impl Node {
         if start.start_number != self.numbers.current {
             return Err(Refusal::StartNumber);
         }
-        let domain = self.feedback.law().domain();
-        if let Some(reverse) = domain.unfit_direction(plan.travel()) {
-            return Err(Refusal::LawDirection { reverse });
-        }
+        self.admit_direction(plan)?;
         let estimate = self.poses.estimate().ok_or(Refusal::NoPose)?;
         let age = estimate.staleness(self.at);
         if age > self.params.pose_timeout {

@@ -62,6 +62,11 @@ impl Run {
         self.cap
     }
 
+    /// Caps the plan time's rate from now on.
+    pub(super) fn set_cap(&mut self, share: f64) {
+        self.cap = share;
+    }
+
     /// Goes on with another plan on the same clock.
     pub(super) fn change_plan(&mut self) {
         self.cursor = 0;

@@ -8,6 +8,7 @@
 use super::Sink;
 use super::params::Params;
 use crate::math;
+use crate::plan::segment::Travel;
 use crate::plan::{Plan, Reference};
 use crate::time::SpanNs;
 use crate::vehicle::Vehicle;
@@ -47,6 +48,11 @@ impl Successors {
     /// How many wait.
     pub(super) fn count(&self) -> usize {
         self.plans.len()
+    }
+
+    /// The ways of driving of all that wait.
+    pub(super) fn travel(&self) -> Travel {
+        self.plans.iter().fold(Travel::default(), |travel, plan| travel.with(plan.travel()))
     }
 
     /// True if a plan with these bytes waits.

@@ -1,6 +1,7 @@
 //! Orders, guards and closed loops against the node, with an ideal machine.
 
 mod continuing;
+mod live;
 
 use super::*;
 use crate::geometry::{BodyVelocity, Pose};

@@ -29,8 +29,8 @@ use tokio::time::MissedTickBehavior;
 use trackhold_core::node::Event;
 use trackhold_core::time::{SpanNs, TimeNs};
 use trackhold_proto::header::MAX_DATAGRAM_BYTES;
-use trackhold_proto::journal::{Order, OrderEvent, PoseEvent};
-use trackhold_proto::message::{PlanPart, Subscribe, TimeRequest, WANT_STATUS};
+use trackhold_proto::journal::{Order, OrderEvent, PoseEvent, TuneEvent};
+use trackhold_proto::message::{PlanPart, Subscribe, TimeRequest, Tune, WANT_STATUS};
 use trackhold_proto::words::{Mode, StopKind};
 use trackhold_proto::{Envelope, Message};
 use transfer::{Assembler, Outcome, Whole};
@@ -50,6 +50,7 @@ pub struct Ends {
     pub orders: Producer<Item>,
     pub drives: Producer<Drives>,
     pub jobs: SyncSender<Whole>,
+    pub tune_jobs: SyncSender<TuneEvent>,
     pub mail: Mail,
     pub bell: Arc<Bell>,
 }
@@ -166,6 +167,8 @@ impl Intake {
             Message::Start(start) => self.order(from, Order::Start(start)),
             Message::Stop(stop) => self.order(from, Order::Stop(stop.stop)),
             Message::Reset(_) => self.order(from, Order::Reset),
+            Message::Tune(tune) => self.tune(from, &tune),
+            Message::Cap(cap) => self.order(from, Order::Cap { share: cap.share }),
             Message::Subscribe(subscribe) => self.subscribe(from, subscribe),
             Message::JournalRequest(_) if from.peer.form == Form::Json => {
                 self.answer(from, message.kind(), "the journal is binary: ask for it in a binary datagram");
@@ -201,6 +204,16 @@ impl Intake {
             self.dropped();
         }
         self.ends.bell.ring();
+    }
+
+    /// Hands a law on to be built. Where there is no room the operator hears nothing and sends it again.
+    fn tune(&mut self, from: From, tune: &Tune) {
+        let From { session, sequence, at, peer } = from;
+        self.ends.mail.post(Letter::AckTo(OrderKey { session, sequence, kind: TuneEvent::KIND }, peer));
+        let event = TuneEvent { session, sequence, received_ns: at.0, law: tune.law.as_str().to_owned() };
+        if self.ends.tune_jobs.try_send(event).is_err() {
+            self.dropped();
+        }
     }
 
     fn plan_part(&mut self, from: From, part: &PlanPart) {

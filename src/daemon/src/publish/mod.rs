@@ -158,6 +158,7 @@ impl Publisher {
                 Body::ModeChange(change) => {
                     tracing::info!("{} → {}: {}", change.from, change.to, change.cause)
                 }
+                Body::LawChanged(law) => tracing::info!("law {} {}", law.name.as_str(), law.gains),
                 Body::Note(Note::Refused { text }) => tracing::warn!("{}", text.as_str()),
                 _ => {}
             }

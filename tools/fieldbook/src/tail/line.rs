@@ -24,6 +24,14 @@ pub(super) fn of(body: &Body) -> String {
             format!("-- plan of {} bytes from session {}, {}", event.raw.len(), event.session, event.digest)
         }
         Body::Order(event) => format!("-- order: {} from session {}", order(&event.order), event.session),
+        Body::Tune(event) => format!("-- tune from session {}: {}", event.session, event.law),
+        Body::LawChanged(law) => format!(
+            "-- law {} {} in force, bandwidth {:.3} rad/s at {:.3} m/s",
+            law.name.as_str(),
+            law.gains,
+            law.bandwidth_rad_s,
+            law.speed_m_s
+        ),
         Body::Trip(event) => format!("-- trip past the loop: {}", event.cause),
         Body::Note(note) => self::note(note),
         Body::Ack(ack) => self::ack(ack),
@@ -58,6 +66,7 @@ fn order(order: &Order) -> String {
         Order::Start(start) => format!("start of plan {}", start.plan),
         Order::Stop(kind) => format!("stop, {kind:?}").to_lowercase(),
         Order::Reset => "reset".to_string(),
+        Order::Cap { share } => format!("cap at {:.0} %", 100.0 * share),
     }
 }
 
@@ -82,6 +91,8 @@ fn ack(ack: &AckEffect) -> String {
         3 => "start",
         4 => "stop",
         5 => "reset",
+        10 => "cap",
+        11 => "tune",
         _ => "order",
     };
     match ack.refusal {

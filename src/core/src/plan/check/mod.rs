@@ -57,6 +57,11 @@ pub struct Following {
     pub at_rest: bool,
 }
 
+impl Following {
+    /// No law is asked.
+    const ANYWHERE: Self = Self { forward: true, reverse: true, at_rest: true };
+}
+
 /// What a plan has to fit.
 #[derive(Clone, Debug)]
 pub struct Terms {
@@ -135,12 +140,14 @@ pub fn too_large(bytes: usize, limit: usize, key: &str) -> Report {
     refused(vec![of_plan(Fault::TooLarge, bytes as f64, limit as f64, "bytes", key)])
 }
 
-/// The plan that its bytes describe, if it is fit.
+/// The plan that its bytes describe, if it is fit. Not asked is whether the law can follow it: that may change while this
+/// looks, and the node asks when it takes the plan.
 ///
 /// # Errors
 /// What makes it unfit, a line each: place, value, limit, unit, and what would mend it.
 pub fn admit(raw: &[u8], terms: &Terms) -> Result<Plan, Vec<String>> {
-    let Report { plan, findings, counts, .. } = examine(raw, terms, false);
+    let terms = Terms { following: Following::ANYWHERE, ..terms.clone() };
+    let Report { plan, findings, counts, .. } = examine(raw, &terms, false);
     match plan {
         Some(plan) if counts[Severity::Unfit as usize] == 0 => Ok(plan),
         _ => {
