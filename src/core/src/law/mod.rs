@@ -6,6 +6,7 @@ mod feedback;
 mod input;
 mod kanayama;
 mod off_axle;
+pub mod predictive;
 mod samson;
 
 pub use feedback::{Feedback, FeedbackParams, OutsideDomain};
@@ -135,7 +136,7 @@ pub struct Kind {
 type Build = fn(&Values, &Context) -> Result<Box<dyn Law>, Vec<Problem>>;
 
 /// All laws.
-pub const KINDS: &[Kind] = &[kanayama::KIND, samson::KIND, off_axle::KIND];
+pub const KINDS: &[Kind] = &[kanayama::KIND, samson::KIND, off_axle::KIND, predictive::KIND];
 
 /// Finds a law in the table.
 ///

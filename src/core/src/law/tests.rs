@@ -83,5 +83,5 @@ fn unknown_laws_and_gains_are_refused_by_name() {
     let problems = build("kanayama", &values, &context("unicycle")).unwrap_err();
     assert_eq!(problems[0].key, "gains.k_z");
     let problems = build("no-such", &Values::default(), &context("unicycle")).unwrap_err();
-    assert!(problems[0].what.contains("kanayama, samson, off-axle"));
+    assert!(problems[0].what.contains("kanayama, samson, off-axle, predictive"));
 }

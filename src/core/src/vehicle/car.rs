@@ -9,7 +9,7 @@ use super::common::{self, MAX_ACCEL, MAX_DECEL, MAX_JERK, MAX_LATERAL, MAX_STEER
 use super::limits::{Step, largest_share, part_of_the_way};
 use super::load::{Demands, Number, Range, Steering};
 use super::wiring::{SPEED_RATIO, STEER_RATIO, SWAP};
-use super::{Kind, Vehicle, Wheels};
+use super::{InputMap, Inputs, Kind, Vehicle, Wheels};
 use crate::geometry::BodyVelocity;
 use crate::keys::{Bound, Key, Values};
 use crate::math;
@@ -129,6 +129,16 @@ impl Car {
         })
     }
 
+    /// The greatest ratio of a front wheel's steering rate to the equivalent single wheel's. That ratio is
+    /// (1 + (Lκ)²)/((1 − |κ|T/2)² + (Lκ)²) for the inner wheel, and greatest where 1 = |κ|T/2 + (Lκ)².
+    fn quickest_wheel(&self) -> f64 {
+        let (half, base) = (self.half_track_m, self.wheelbase_m);
+        let peak = (math::sqrt(half * half + 4.0 * base * base) - half) / (2.0 * base * base);
+        let curvature = peak.min(self.max_curvature_1_m);
+        let (across, along) = (1.0 - curvature * half, base * curvature);
+        (1.0 + along * along) / (across * across + along * along)
+    }
+
     /// The curvature next to `last` on the way to `target`, as far as each wheel's largest step lets it go.
     fn curvature_step(&self, last: &Wheels, target: &Wheels, steps: &Wheels) -> (f64, f64) {
         let (from, to) = (self.curvature_of(last), self.curvature_of(target));
@@ -199,6 +209,16 @@ impl Vehicle for Car {
     fn greatest(&self) -> Wheels {
         let other = if self.is_ackermann() { self.max_steer_rad } else { 0.0 };
         [self.speed.top, self.max_steer_rad, other, 0.0]
+    }
+
+    fn inputs(&self) -> Inputs {
+        // With an angle for each front wheel: the equivalent single one, whose rate the faster wheel bounds.
+        let greatest = self.angle(0.0, self.max_curvature_1_m);
+        let rate = self.max_steer_rate_rad_s / self.quickest_wheel();
+        Inputs {
+            map: InputMap::Car { wheelbase_m: self.wheelbase_m, half_track_m: self.half_track_m },
+            ranges: [self.speed, common::steering_range(greatest, rate)],
+        }
     }
 
     fn demands(&self, curvature_1_m: f64, curvature_rate_1_m2: f64) -> Demands {

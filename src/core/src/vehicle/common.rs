@@ -61,6 +61,11 @@ pub(super) fn speed_range(values: &Values, max_speed: &str) -> Range {
     Range { top: values.get(max_speed), rise: accel, fall: values.find(MAX_DECEL.name).unwrap_or(accel) }
 }
 
+/// The range of a steering angle, which turns either way alike.
+pub(super) fn steering_range(max_rad: f64, max_rate_rad_s: f64) -> Range {
+    Range { top: max_rad, rise: max_rate_rad_s, fall: max_rate_rad_s }
+}
+
 /// The largest steps of a command whose first two numbers have these ranges.
 pub(super) fn largest_steps(ranges: [Range; 2], last: &Wheels, target: &Wheels, seconds: f64) -> Wheels {
     let step = |index: usize| ranges[index].largest_step(last[index], target[index], seconds);

@@ -203,19 +203,19 @@ impl Quantity {
 
 /// How far and how fast a number may go; all greater than 0.
 #[derive(Clone, Copy, Debug, PartialEq)]
-pub(super) struct Range {
+pub struct Range {
     /// Its greatest magnitude.
-    pub(super) top: f64,
+    pub top: f64,
     /// How fast its magnitude may grow, 1/s.
-    pub(super) rise: f64,
+    pub rise: f64,
     /// How fast its magnitude may fall, 1/s.
-    pub(super) fall: f64,
+    pub fall: f64,
 }
 
 impl Range {
     /// The largest change from `last` towards `target` in `seconds`: towards zero by the fall, away from it by the
     /// rise, through zero by each for its part of the time.
-    pub(super) fn largest_step(&self, last: f64, target: f64, seconds: f64) -> f64 {
+    pub fn largest_step(&self, last: f64, target: f64, seconds: f64) -> f64 {
         let falls = last * target < 0.0 || target.abs() < last.abs();
         if self.rise == self.fall || !falls {
             return self.rise * seconds;

@@ -8,11 +8,13 @@
 //! | `two_sided`, `common` | what kinds share |
 //! | `load` | what a motion asks of the limits, and the bounds on speed and acceleration that follow |
 //! | `limits` | the rule for commands |
+//! | `inputs` | what the command's numbers do, for laws that look ahead |
 //! | `wiring` | the drive map: a machine that is wired or geared another way |
 
 mod car;
 mod common;
 mod differential;
+mod inputs;
 mod limits;
 mod load;
 mod skid_steer;
@@ -21,8 +23,9 @@ mod two_sided;
 mod unicycle;
 mod wiring;
 
+pub use inputs::{InputMap, Inputs};
 pub use limits::{Limited, Step, limit};
-pub use load::{Demands, LimitName, Load, Loads, PathState};
+pub use load::{Demands, LimitName, Load, Loads, PathState, Range};
 
 use crate::geometry::BodyVelocity;
 use crate::keys::{Key, Problem, Values, names};
@@ -81,6 +84,9 @@ pub trait Vehicle: Debug + Send + Sync {
 
     /// The greatest magnitude of each number of a wheel command: what a drive may refuse to exceed.
     fn greatest(&self) -> Wheels;
+
+    /// The machine as two bounded inputs and what they make it do, in its own terms: for laws that look ahead.
+    fn inputs(&self) -> Inputs;
 
     /// A command in the machine's own terms as it goes out to the drives: the drive map of the site file. Every other
     /// method speaks of commands as they go out.

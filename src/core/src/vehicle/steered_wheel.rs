@@ -15,7 +15,7 @@
 use super::common::{self, MAX_ACCEL, MAX_DECEL, MAX_JERK, MAX_LATERAL, MAX_STEER_RATE, Margins};
 use super::load::{Demands, Number, Quantity, Range, Steering};
 use super::wiring::{SPEED_RATIO, STEER_RATIO};
-use super::{Kind, Vehicle, Wheels};
+use super::{InputMap, Inputs, Kind, Vehicle, Wheels};
 use crate::geometry::BodyVelocity;
 use crate::keys::{Bound, Key, Values};
 use crate::math::{self, FRAC_PI_2, PI};
@@ -193,6 +193,13 @@ impl Vehicle for SteeredWheel {
 
     fn greatest(&self) -> Wheels {
         [self.speed.top, self.max_steer_rad, 0.0, 0.0]
+    }
+
+    fn inputs(&self) -> Inputs {
+        Inputs {
+            map: InputMap::SteeredWheel { wheelbase_m: self.wheelbase_m },
+            ranges: [self.speed, common::steering_range(self.max_steer_rad, self.max_steer_rate_rad_s)],
+        }
     }
 
     fn demands(&self, curvature_1_m: f64, curvature_rate_1_m2: f64) -> Demands {

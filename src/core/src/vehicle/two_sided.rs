@@ -8,7 +8,7 @@
 
 use super::common::{self, Margins};
 use super::load::{Demands, Number, Quantity, Range};
-use super::{Vehicle, Wheels};
+use super::{InputMap, Inputs, Vehicle, Wheels};
 use crate::geometry::BodyVelocity;
 use crate::keys::{Bound, Key, Problem, Values};
 use alloc::vec;
@@ -157,6 +157,15 @@ impl Vehicle for TwoSided {
 
     fn greatest(&self) -> Wheels {
         [self.range.top, self.range.top, 0.0, 0.0]
+    }
+
+    fn inputs(&self) -> Inputs {
+        let [left, right] = self.radius_m;
+        let map = InputMap::Linear {
+            speed: [self.part[0] * left, self.part[1] * right],
+            turn_rate: [-left / self.width_m, right / self.width_m],
+        };
+        Inputs { map, ranges: [self.range; 2] }
     }
 
     fn demands(&self, curvature_1_m: f64, curvature_rate_1_m2: f64) -> Demands {

@@ -3,7 +3,7 @@
 use super::common::{self, MAX_ACCEL, MAX_DECEL, MAX_JERK, MAX_LATERAL, Margins};
 use super::load::{Demands, Number, Quantity, Range};
 use super::wiring::{SPEED_RATIO, TURN_RATIO};
-use super::{Kind, Vehicle, Wheels};
+use super::{InputMap, Inputs, Kind, Vehicle, Wheels};
 use crate::geometry::BodyVelocity;
 use crate::keys::{Bound, Key, Values};
 use alloc::sync::Arc;
@@ -92,6 +92,11 @@ impl Vehicle for Unicycle {
 
     fn greatest(&self) -> Wheels {
         [self.speed.top, self.turn.top, 0.0, 0.0]
+    }
+
+    fn inputs(&self) -> Inputs {
+        let map = InputMap::Linear { speed: [1.0, 0.0], turn_rate: [0.0, 1.0] };
+        Inputs { map, ranges: [self.speed, self.turn] }
     }
 
     fn demands(&self, curvature_1_m: f64, curvature_rate_1_m2: f64) -> Demands {

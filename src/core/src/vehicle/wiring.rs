@@ -9,7 +9,7 @@
 
 use super::limits::Step;
 use super::load::Demands;
-use super::{Built, Vehicle, Wheels};
+use super::{Built, Inputs, Vehicle, Wheels};
 use crate::geometry::BodyVelocity;
 use crate::keys::{Bound, Key, Problem, Values};
 use alloc::format;
@@ -163,6 +163,10 @@ impl Vehicle for Wired {
 
     fn greatest(&self) -> Wheels {
         self.greatest_of(&self.machine.greatest())
+    }
+
+    fn inputs(&self) -> Inputs {
+        self.machine.inputs()
     }
 
     fn demands(&self, curvature_1_m: f64, curvature_rate_1_m2: f64) -> Demands {

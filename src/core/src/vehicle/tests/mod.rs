@@ -1,6 +1,7 @@
 //! Tests of the machines: conversions against outside values, the rule for limits, loads and bounds, the drive map.
 
 mod bounds;
+mod inputs;
 mod limits;
 mod values;
 mod wiring;
