@@ -5,6 +5,8 @@
 //! | --- | --- |
 //! | `scenario` | a scenario as it lies in the reference data, and the cost of a motion |
 //! | `optima` | the optima drive through our own vehicle: the data are what they claim to be |
+//! | `table` | every law through every scenario, in closed loop; the table is a committed snapshot |
 
 mod optima;
 mod scenario;
+mod table;
