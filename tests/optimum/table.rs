@@ -11,6 +11,7 @@ use crate::scenario::{self, Scenario};
 use fieldbook::sim::{self, Observer, Options, SimError};
 use std::collections::BTreeMap;
 use std::fmt::Write as _;
+use std::sync::Arc;
 use trackhold_core::geometry::Pose;
 use trackhold_core::keys::Values;
 use trackhold_core::law;
@@ -92,8 +93,8 @@ pub(crate) fn drive(settings: &Settings, scenario: &Scenario) -> Drive {
     let mut poses = Poses(Vec::with_capacity(scenario.ticks + 1));
     let outcome = match sim::simulate(settings, &scenario.raw, &options, &mut poses) {
         Ok(outcome) => outcome,
-        Err(SimError::Settings(_) | SimError::Plan(_) | SimError::Start(_)) => return Drive::OutsideDomain,
-        Err(error @ SimError::Robot(_)) => panic!("there is no stand-in robot: {error}"),
+        Err(SimError::Plan(_) | SimError::Start(_)) => return Drive::OutsideDomain,
+        Err(error) => panic!("{}: {error}", settings.law.name),
     };
     let ended = matches!(outcome.cause, Cause::PlanEnded | Cause::NotSettled);
     match (outcome.mode, outcome.cause) {
@@ -128,17 +129,20 @@ impl Column {
     }
 }
 
-fn columns(scenarios: &[Scenario]) -> Vec<Column> {
+fn columns(machine: &law::Context, scenarios: &[Scenario]) -> Vec<Column> {
     let (base, gains) = (scenario::settings(), gains());
     for (name, gains) in &gains {
-        law::build(name, gains).unwrap_or_else(|problems| panic!("gains.toml, {name}: {problems:?}"));
+        law::gains(name, gains).unwrap_or_else(|problems| panic!("gains.toml, {name}: {problems:?}"));
     }
     let column = |kind: &law::Kind| {
-        let settings = settings_with(&base, kind.name, gains.get(kind.name).unwrap_or(&Values::default()));
-        Column {
-            law: kind.name,
-            drives: scenarios.iter().map(|scenario| drive(&settings, scenario)).collect(),
-        }
+        let drives = if kind.machines.unfit(machine).is_some() {
+            vec![Drive::OutsideDomain; scenarios.len()]
+        } else {
+            let settings =
+                settings_with(&base, kind.name, gains.get(kind.name).unwrap_or(&Values::default()));
+            scenarios.iter().map(|scenario| drive(&settings, scenario)).collect()
+        };
+        Column { law: kind.name, drives }
     };
     law::KINDS.iter().map(column).collect()
 }
@@ -173,7 +177,9 @@ fn print(scenarios: &[Scenario], columns: &[Column]) -> String {
 fn the_table_of_laws_and_scenarios_is_the_committed_one() {
     let checked = scenario::settings().checked().unwrap();
     let scenarios = scenario::all(&checked.vehicle);
-    let columns = columns(&scenarios);
+    let vehicle = Arc::clone(&checked.vehicle);
+    let machine = law::Context { vehicle, period_s: checked.params.period_s(), dead_time_s: 0.0 };
+    let columns = columns(&machine, &scenarios);
     let table = print(&scenarios, &columns);
     println!("{table}");
     for column in &columns {
