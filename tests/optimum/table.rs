@@ -23,6 +23,10 @@ const REWRITE: &str = "TRACKHOLD_REWRITE_TABLE";
 const TABLE: &str = "table.txt";
 /// Laws that optimise in every tick; all others compute their result from a formula or a Riccati equation.
 const OPTIMISING: &[&str] = &["predictive"];
+/// What is aimed at: of the best law that does not optimise on each scenario, of that one's median, and of one that does.
+const CLOSED_AIM: f64 = 1.35;
+const MEDIAN_AIM: f64 = 1.2;
+const OPTIMISING_AIM: f64 = 1.05;
 const HEAD: &str = "\
 Cost of a law's drive over the optimum's: integral of x_e^2 + y_e^2 + 0.1 phi_e^2, twelve scenarios on a differential
 drive, one gain set a law (gains.toml). -: outside the law's domain. stopped: a guard stopped it on the way.
@@ -153,23 +157,50 @@ fn best_closed(columns: &[Column], scenario: usize) -> Option<f64> {
     closed.filter_map(|column| column.drives[scenario].ratio()).min_by(f64::total_cmp)
 }
 
+fn number(value: Option<f64>) -> String {
+    value.map_or_else(|| "-".to_owned(), |value| format!("{value:.3}"))
+}
+
+/// How far an aim is reached: which scenarios lie above the bound, or were not driven.
+fn aim(what: &str, bound: f64, scenarios: &[Scenario], ratios: &[Option<f64>]) -> String {
+    let missed = scenarios.iter().zip(ratios).filter(|(_, ratio)| ratio.is_none_or(|ratio| ratio > bound));
+    let missed: Vec<String> =
+        missed.map(|(scenario, ratio)| format!("{} {}", scenario.name, number(*ratio))).collect();
+    let reached = ratios.len() - missed.len();
+    let but = if missed.is_empty() { String::new() } else { format!("; not {}", missed.join(", ")) };
+    format!("aim: {what} at most {bound} on each: {reached} of {}{but}\n", ratios.len())
+}
+
+fn aims(scenarios: &[Scenario], columns: &[Column], best: &[Option<f64>]) -> String {
+    let mut text = aim("closed", CLOSED_AIM, scenarios, best);
+    let middle = median(best.iter().flatten().copied().collect());
+    writeln!(text, "aim: median of closed at most {MEDIAN_AIM}: {}", number(middle))
+        .expect("a text takes it");
+    for column in columns.iter().filter(|column| OPTIMISING.contains(&column.law)) {
+        let ratios: Vec<Option<f64>> = column.drives.iter().map(|drive| drive.ratio()).collect();
+        text.push_str(&aim(column.law, OPTIMISING_AIM, scenarios, &ratios));
+    }
+    text
+}
+
 fn print(scenarios: &[Scenario], columns: &[Column]) -> String {
     let mut text = String::from(HEAD);
     let mut line = |name: &str, cells: Vec<String>, closed: String| {
         let cells: String = cells.iter().map(|cell| format!("{cell:>13}")).collect();
         writeln!(text, "{name:<13}{cells}{closed:>9}").expect("a text takes every line");
     };
-    let number = |value: Option<f64>| value.map_or_else(|| "-".to_owned(), |value| format!("{value:.3}"));
     line("", columns.iter().map(|column| column.law.to_owned()).collect(), "closed".to_owned());
     let best: Vec<Option<f64>> = (0..scenarios.len()).map(|index| best_closed(columns, index)).collect();
     for (index, scenario) in scenarios.iter().enumerate() {
         let cells = columns.iter().map(|column| column.drives[index].cell()).collect();
         line(&scenario.name, cells, number(best[index]));
     }
-    let best: Vec<f64> = best.into_iter().flatten().collect();
-    let worst = best.iter().copied().max_by(f64::total_cmp);
+    let reached: Vec<f64> = best.iter().flatten().copied().collect();
+    let worst = reached.iter().copied().max_by(f64::total_cmp);
     line("worst", columns.iter().map(|column| number(column.worst())).collect(), number(worst));
-    line("median", columns.iter().map(|column| number(column.median())).collect(), number(median(best)));
+    line("median", columns.iter().map(|column| number(column.median())).collect(), number(median(reached)));
+    text.push('\n');
+    text.push_str(&aims(scenarios, columns, &best));
     text
 }
 

@@ -13,7 +13,7 @@ What it computes
     by itself, w_(-1) = 0. Between ticks the chassis point moves on the exact arc. The error is pose minus reference at
     t_k, its heading wrapped to (-pi, pi]. Nothing else is weighed: no regularisation, no end cost. The runs are so long
     that the error has died out at their end (`end_error_m`, `end_error_rad` in optima.json tell), so that a longer one
-    would cost the same.
+    would cost the same. (In "stop" a millimetre is left: shifting sideways at rest would cost more than it saves.)
 
     The problem is not convex. It is solved from twenty guesses and more (a feedback law simulated with five gain sets, the
     reference's own wheel speeds, smooth random wheel speeds; and from the best of these, disturbed), and the best result is
