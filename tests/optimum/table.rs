@@ -22,7 +22,7 @@ use trackhold_proto::words::{Cause, Mode};
 const REWRITE: &str = "TRACKHOLD_REWRITE_TABLE";
 const TABLE: &str = "table.txt";
 /// Laws that optimise in every tick; all others compute their result from a formula or a Riccati equation.
-const OPTIMISING: &[&str] = &["predictive"];
+pub(crate) const OPTIMISING: &[&str] = &["predictive"];
 /// What is aimed at: of the best law that does not optimise on each scenario, of that one's median, and of one that does.
 const CLOSED_AIM: f64 = 1.35;
 const MEDIAN_AIM: f64 = 1.2;
