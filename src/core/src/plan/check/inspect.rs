@@ -52,7 +52,8 @@ pub(super) struct Inspector<'a> {
     /// The fastest look of the segment at hand.
     fastest: Option<Look>,
     narrowed: u32,
-    steering: Steering,
+    /// Only for a machine that steers.
+    steering: Option<Steering>,
 }
 
 impl<'a> Inspector<'a> {
@@ -77,7 +78,7 @@ impl<'a> Inspector<'a> {
             still_in: None,
             fastest: None,
             narrowed: 0,
-            steering: Steering::default(),
+            steering: terms.vehicle.layout().is_steered().then(Steering::default),
         }
     }
 
@@ -231,7 +232,8 @@ impl<'a> Inspector<'a> {
     /// Where a motion begins: is the steering there by then?
     fn steering(&mut self, look: &Look) {
         let (rest_speed, sampled) = (self.thresholds.rest_speed_m_s, self.is_sampled(look));
-        let Some(swing) = self.steering.next(look, rest_speed, sampled) else { return };
+        let next = self.steering.as_mut().and_then(|steering| steering.next(look, rest_speed, sampled));
+        let Some(swing) = next else { return };
         if swing.is_first && self.plan.continues_at().is_some() {
             return;
         }
