@@ -136,7 +136,8 @@ impl Column {
 fn columns(machine: &law::Context, scenarios: &[Scenario]) -> Vec<Column> {
     let (base, gains) = (scenario::settings(), gains());
     for (name, gains) in &gains {
-        law::gains(name, gains).unwrap_or_else(|problems| panic!("gains.toml, {name}: {problems:?}"));
+        law::gains(name, gains, machine)
+            .unwrap_or_else(|problems| panic!("gains.toml, {name}: {problems:?}"));
     }
     let column = |kind: &law::Kind| {
         let drives = if kind.machines.unfit(machine).is_some() {

@@ -116,7 +116,9 @@ fn tune(request: &str, base: &Settings, scenarios: &[Scenario]) {
     let (law, chosen) = request.split_once(':').unwrap_or((request, ""));
     let kind = law::find(law).unwrap_or_else(|problem| panic!("{VARIABLE}: {problem}"));
     let given = table::gains().remove(law).unwrap_or_default();
-    let fixed = law::gains(law, &given).unwrap_or_else(|problems| panic!("gains.toml, {law}: {problems:?}"));
+    let context = base.checked().expect("the site file holds").context();
+    let fixed = law::gains(law, &given, &context)
+        .unwrap_or_else(|problems| panic!("gains.toml, {law}: {problems:?}"));
     let chosen: Vec<&str> = chosen.split('+').filter(|name| !name.is_empty()).collect();
     let (names, start): (Vec<String>, Vec<f64>) = fixed
         .iter()

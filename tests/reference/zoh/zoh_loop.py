@@ -355,7 +355,7 @@ NODE = {"min_plan_rate": 1.0, "blend_s": 0.0, "settle_rate_1_s": 2.0,
 
 def in_regime(law, pose, ref, vd, wd):
     """The wanted (v, omega) of the feedback in force, and whether that is the law."""
-    if abs(vd) >= 1e-3 or (abs(wd) >= 1e-3 and isinstance(law, OffAxle)):
+    if abs(vd) >= 1e-3 or isinstance(law, OffAxle):
         return law.wanted(pose, ref, vd, wd), True
     if abs(wd) < 1e-3:
         return (0.0, 0.0), False

@@ -71,6 +71,8 @@ pub struct Question<'a> {
     pub settle_s: f64,
     /// The run is coming to rest: zero is wanted.
     pub resting: bool,
+    /// The plan has ended, and the machine settles.
+    pub ended: bool,
 }
 
 /// What a law would have commanded at a pose.
@@ -122,10 +124,10 @@ impl Asked {
 
     /// Asks for a command.
     pub fn ask(&mut self, question: &Question<'_>) -> Answer {
-        let Question { at, literal, reference, ahead, pose, step_s, settle_s, resting } = *question;
+        let Question { at, literal, reference, ahead, pose, step_s, settle_s, resting, ended } = *question;
         let last = (self.wheels, self.vehicle.body(&self.wheels));
         let input = Input::new(reference, &ahead, pose, last, step_s);
-        self.feedback.choose(literal, input.error.heading_rad);
+        self.feedback.choose(literal, input.error.heading_rad, ended);
         let answer = self.feedback.control(at, &input).map(|wanted| wanted.velocity);
         let stopped = !answer.is_ok_and(BodyVelocity::is_finite);
         let wanted = answer.ok().filter(|_| !stopped && !resting).unwrap_or(BodyVelocity::ZERO);

@@ -114,7 +114,9 @@ fn ask_all(
         let (reference, pose) = (plan.at(plan_time_s, &mut cursor), mount.chassis(row.pose));
         let ahead = OnPlan { plan, t_s: plan_time_s, rate: 1.0 };
         let (at, literal) = (TimeNs(0) + SpanNs::from_seconds(row.t_s - rows[0].t_s), reference.velocity);
-        let question = Question { at, literal, reference, ahead, pose, step_s, settle_s, resting: false };
+        let ended = !plan.is_open() && plan_time_s >= plan.duration_s();
+        let question =
+            Question { at, literal, reference, ahead, pose, step_s, settle_s, resting: false, ended };
         let answer = asked.ask(&question);
         totals.poses += 1;
         totals.limited += u64::from(answer.limited);

@@ -106,6 +106,19 @@ impl Settling {
         }
     }
 
+    /// The body velocity wanted where the reference rests for a while: the heading is corrected, and the distance along it.
+    pub fn hold(&mut self, input: &Input<'_>, vehicle: &dyn Vehicle, gains: &RestGains) -> BodyVelocity {
+        if vehicle.pivot_decel_rad_s2().is_none() {
+            return self.along_only(input, vehicle, gains);
+        }
+        let (e_x, _) = input.robot_frame_error_m();
+        let turn_rad = input.error.heading_rad;
+        let slack = if self.is_settled() { WAKE_FACTOR } else { REACHED };
+        let near = e_x.abs() <= slack * gains.distance_m && turn_rad.abs() <= slack * gains.heading_rad;
+        self.phase = if near { Phase::Settled } else { Phase::Begin };
+        if near { BodyVelocity::ZERO } else { pivot(input, gains.rate_1_s) }
+    }
+
     /// The phase in force now: the last one until it has reached what it is for.
     fn next_phase(&self, input: &Input<'_>, gains: &RestGains) -> Phase {
         let error = &input.error;

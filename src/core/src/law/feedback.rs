@@ -40,6 +40,7 @@ pub struct Feedback {
     vehicle: Arc<dyn Vehicle>,
     params: FeedbackParams,
     regime: Regime,
+    ended: bool,
     settling: Settling,
     /// The way round that realigning has taken: 1 to the left, −1 to the right.
     turning: f64,
@@ -60,6 +61,7 @@ impl Feedback {
             vehicle,
             params,
             regime: Regime::None,
+            ended: false,
             settling: Settling::default(),
             turning: 0.0,
             blend: Blend::default(),
@@ -103,7 +105,9 @@ impl Feedback {
     }
 
     /// Chooses the regime by the motion of the reference, its plan's time running at rate 1, and the heading error.
-    pub fn choose(&mut self, motion: BodyVelocity, heading_error_rad: f64) -> Regime {
+    /// `ended`: the reference rests for good, and the machine has to settle within the dead band.
+    pub fn choose(&mut self, motion: BodyVelocity, heading_error_rad: f64, ended: bool) -> Regime {
+        self.ended = ended;
         let (off, limit_rad) = (heading_error_rad.abs(), self.heading_limit_rad());
         let realigning = self.regime == Regime::Realigning;
         let next = if off > limit_rad || realigning && off > REALIGNED_SHARE * limit_rad {
@@ -132,8 +136,10 @@ impl Feedback {
     pub fn control(&mut self, at: TimeNs, input: &Input<'_>) -> Result<Wanted, OutsideDomain> {
         let rest = self.params.rest;
         let wanted = match self.regime {
-            Regime::Settling => self.settling.control(input, &*self.vehicle, &rest).into(),
             _ if self.law_is_in_force() => self.law.control(input),
+            Regime::Settling if self.ended => self.settling.control(input, &*self.vehicle, &rest).into(),
+            // The plan goes on soon: no manoeuvre is begun that it would cut short.
+            Regime::Settling => self.settling.hold(input, &*self.vehicle, &rest).into(),
             Regime::Realigning if self.vehicle.pivot_decel_rad_s2().is_none() => return Err(OutsideDomain),
             Regime::Realigning => self.realign(input, rest.rate_1_s).into(),
             _ => pivot(input, rest.rate_1_s).into(),
@@ -153,7 +159,9 @@ impl Feedback {
 
     fn law_is_in_force(&self) -> bool {
         match self.regime {
-            Regime::None | Regime::Settling | Regime::Realigning => false,
+            Regime::None | Regime::Realigning => false,
+            // No law has a dead band; and none that is smooth settles a machine that cannot move sideways.
+            Regime::Settling => self.law.domain().at_rest && !self.ended,
             Regime::Pivoting => self.law.domain().pivots,
             Regime::Moving => true,
         }

@@ -119,7 +119,7 @@ impl Node {
         };
         let literal = run.literal(plan);
         let error = TrackingError::between(pose, literal.pose, literal.direction);
-        record.regime = feedback.choose(literal.velocity, error.heading_rad);
+        record.regime = feedback.choose(literal.velocity, error.heading_rad, since_end.is_some());
         let holding = record.regime == Regime::Realigning;
         let bearing = Bearing { literal: &literal, vehicle: &**vehicle, params, seconds };
         let reference = run.pace(&bearing, &error, (*mode == Mode::ControlledStop, holding), record);

@@ -197,6 +197,7 @@ impl Logged {
             step_s: seconds,
             settle_s: period_s,
             resting,
+            ended: record.has(flag::SETTLING),
         });
         self.following = matches!(record.mode, Mode::Tracking | Mode::ControlledStop);
         self.note(record, &answer);

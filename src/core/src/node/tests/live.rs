@@ -67,7 +67,7 @@ fn a_law_changes_while_tracking_is_told_and_takes_over() {
     assert_eq!((rig.last_ack().order_kind, rig.node.mode()), (11, Mode::Tracking));
     let [law] = &rig.laws()[..] else { panic!("{:?}", rig.laws()) };
     assert_eq!(law.name.as_str(), "kanayama");
-    assert_eq!(law.gains, r#"{"k_heading":10.0,"k_x":2.0,"k_y":25.0}"#);
+    assert_eq!(law.gains, r#"{"k_heading":10.0,"k_i":0.0,"k_x":2.0,"k_y":25.0}"#);
     // The machine's 2 m/s times √k_y.
     assert_eq!((law.speed_m_s, law.bandwidth_rad_s), (2.0, 10.0));
     let settled = rig.ticks(30).pop().unwrap();
