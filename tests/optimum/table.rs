@@ -80,6 +80,14 @@ pub(crate) fn settings_with(base: &Settings, law: &str, gains: &Values) -> Setti
     Settings { law: LawSettings { name: law.to_owned(), gains: gains.clone() }, ..base.clone() }
 }
 
+/// A law's gains with those not given filled in; the law and all that is given have to hold.
+pub(crate) fn all_gains(base: &Settings, law: &str, gains: &Values) -> Values {
+    match settings_with(base, law, gains).checked() {
+        Ok(checked) => checked.settings.law.gains,
+        Err(problems) => panic!("gains.toml, {law}: {problems:?}"),
+    }
+}
+
 /// Keeps the true poses of a run.
 struct Poses(Vec<Pose>);
 
@@ -136,8 +144,7 @@ impl Column {
 fn columns(machine: &law::Context, scenarios: &[Scenario]) -> Vec<Column> {
     let (base, gains) = (scenario::settings(), gains());
     for (name, gains) in &gains {
-        law::gains(name, gains, machine)
-            .unwrap_or_else(|problems| panic!("gains.toml, {name}: {problems:?}"));
+        all_gains(&base, name, gains);
     }
     let column = |kind: &law::Kind| {
         let drives = if kind.machines.unfit(machine).is_some() {

@@ -116,9 +116,7 @@ fn tune(request: &str, base: &Settings, scenarios: &[Scenario]) {
     let (law, chosen) = request.split_once(':').unwrap_or((request, ""));
     let kind = law::find(law).unwrap_or_else(|problem| panic!("{VARIABLE}: {problem}"));
     let given = table::gains().remove(law).unwrap_or_default();
-    let context = base.checked().expect("the site file holds").context();
-    let fixed = law::gains(law, &given, &context)
-        .unwrap_or_else(|problems| panic!("gains.toml, {law}: {problems:?}"));
+    let fixed = table::all_gains(base, law, &given);
     let chosen: Vec<&str> = chosen.split('+').filter(|name| !name.is_empty()).collect();
     let (names, start): (Vec<String>, Vec<f64>) = fixed
         .iter()
