@@ -183,3 +183,75 @@ fn inverted(matrix: &Matrix) -> Matrix {
     ]
     .map(|row| row.map(|value| value / determinant))
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::law::testing::Random;
+    use alloc::vec::Vec;
+
+    fn cost_of(cost: &Matrix, e: &[f64; 3]) -> f64 {
+        (0..3).map(|row| (0..3).map(|column| e[row] * cost[row][column] * e[column]).sum::<f64>()).sum()
+    }
+
+    /// The cost to go is the regulator's Lyapunov function on the linear error model, whatever the motion ahead: over
+    /// a step it falls by what the step costs. 10,000 runs; growth within 1e-12 of the beginning counts as none.
+    #[test]
+    fn the_cost_to_go_never_grows() {
+        for run in 0..10_000 {
+            let mut random = Random(run);
+            let weights = Weights {
+                error: [0.1, 0.1, 0.01].map(|low| random.magnitude(low, 100.0 * low)),
+                effort: [0.1, 0.1].map(|low| random.magnitude(low, 100.0 * low)),
+            };
+            let mut cost = [[0.0; 3]; 3];
+            let mut steps = Vec::new();
+            for _ in 0..20 {
+                let motion = BodyVelocity {
+                    speed_m_s: random.within(-1.5, 1.5),
+                    turn_rate_rad_s: random.within(-2.0, 2.0),
+                };
+                let held = Held::new(motion, 0.05);
+                let (before, gain) = held.backward(&cost, &weights);
+                cost = before;
+                steps.push((held, gain, before));
+            }
+            let mut e: [f64; 3] = core::array::from_fn(|_| random.within(-1.0, 1.0));
+            let begin = cost_of(&cost, &e);
+            let mut last = begin;
+            for (held, gain, before) in steps.iter().rev() {
+                let value = cost_of(before, &e);
+                assert!(value <= last + 1e-12 * begin, "{last} {value}");
+                last = value;
+                let u = gain.map(|row| -(row[0] * e[0] + row[1] * e[1] + row[2] * e[2]));
+                e = core::array::from_fn(|row| {
+                    let own: f64 = held.a[row].iter().zip(e).map(|(factor, e)| factor * e).sum();
+                    own + held.b[row][0] * u[0] + held.b[row][1] * u[1]
+                });
+            }
+        }
+    }
+
+    #[test]
+    fn doubling_is_the_recursion_repeated() {
+        let weights = Weights { error: [4.0, 10.0, 1.0], effort: [1.0, 0.5] };
+        for (v, w) in [(1.0, 0.0), (-0.3, 0.8), (0.0, 0.5), (0.0, 0.0)] {
+            let held = Held::new(BodyVelocity { speed_m_s: v, turn_rate_rad_s: w }, 0.05);
+            let mut cost = [[0.0; 3]; 3];
+            (0..64).for_each(|_| cost = held.backward(&cost, &weights).0);
+            let doubled = held.repeated(&weights, 6);
+            for (cost, doubled) in cost.iter().flatten().zip(doubled.iter().flatten()) {
+                assert!((cost - doubled).abs() < 1e-10 * cost.abs().max(1.0), "{cost} {doubled}");
+            }
+        }
+    }
+
+    #[test]
+    fn the_series_joins_the_formula() {
+        for angle in [-0.500_001, -0.499_999, 0.499_999, 0.500_001_f64] {
+            let direct = (angle - math::cos_sin(angle).1) / (angle * angle * angle);
+            assert!((cubic_rest(angle, math::cos_sin(angle).1) - direct).abs() < 1e-14, "{angle}");
+        }
+        assert_eq!(cubic_rest(0.0, 0.0), 1.0 / 6.0);
+    }
+}
