@@ -161,7 +161,7 @@ struct Run {
 impl Run {
     fn new(vehicle: &Arc<dyn Vehicle>, random: &mut Random) -> Self {
         let context = Context { vehicle: vehicle.clone(), period_s: PERIOD_S, dead_time_s: 0.0 };
-        let gains = law::gains("predictive", &Values::default()).expect("defaults hold");
+        let gains = law::gains("predictive", &Values::default(), &context).expect("defaults hold");
         let law = Predictive::new(&gains, &context).expect("the fallback law is for every machine");
         let way = if random.within(0.0, 1.0) < 0.7 { 1.0 } else { -1.0 };
         let speed_m_s = way * random.within(0.5, 0.95) * vehicle.top_speed_m_s();

@@ -6,6 +6,7 @@ use std::hint::black_box;
 use trackhold_core::digest::{self, ResultDigest};
 use trackhold_core::geometry::Pose as Pose2;
 use trackhold_core::keys::Values;
+use trackhold_core::law;
 use trackhold_core::node::{Event, Node, Sink};
 use trackhold_core::plan::check::admit;
 use trackhold_core::plan::{compile, pack};
@@ -45,6 +46,11 @@ fn settings(law: &str) -> Settings {
         law: LawSettings { name: law.into(), gains: Values::default() },
         ..Settings::default()
     }
+}
+
+/// The laws for this machine, which does not steer.
+fn laws() -> impl Iterator<Item = &'static str> {
+    law::KINDS.iter().filter(|kind| kind.machines != law::Machines::Steered).map(|kind| kind.name)
 }
 
 const BENDS: &str = r#"{"format":"trackhold-plan/1","id":"bends","revision":1,"start":{"x_m":0,"y_m":0,"heading_rad":0},
@@ -90,7 +96,7 @@ fn pose_event(at_ns: u64) -> Event {
 fn ticks(criterion: &mut Criterion) {
     let mut group = criterion.benchmark_group("pose and tick");
     group.throughput(Throughput::Elements(1));
-    for law in ["kanayama", "samson", "off-axle"] {
+    for law in laws() {
         let (mut node, mut last, mut tick) = tracking(law, BENDS.as_bytes());
         group.bench_function(law, |bencher| {
             bencher.iter(|| {
@@ -265,7 +271,7 @@ fn simulation(criterion: &mut Criterion) {
         Options { start: Some(Pose2::new(-0.2, 0.1, 0.2)), seconds: Some(TICKS as f64 / 50.0 - 0.01) };
     let mut group = criterion.benchmark_group("simulated tick");
     group.throughput(Throughput::Elements(TICKS)).sample_size(20);
-    for law in ["kanayama", "samson", "off-axle"] {
+    for law in laws() {
         let settings = settings(law);
         group.bench_function(law, |bencher| {
             bencher.iter(|| {

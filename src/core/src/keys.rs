@@ -55,6 +55,11 @@ impl Bound {
         Self { low: 0.0, high, low_included: false }
     }
 
+    /// The lower and the upper end, whether included or not.
+    pub const fn ends(&self) -> (f64, f64) {
+        (self.low, self.high)
+    }
+
     /// True if `value` is a finite number inside.
     pub fn holds(&self, value: f64) -> bool {
         value.is_finite()

@@ -13,6 +13,7 @@ use trackhold::lanes::{Bell, Item, OtherEnds, Shared, Waste, lanes_with};
 use trackhold::site::Site;
 use trackhold::zero::Outlet;
 use trackhold_core::digest;
+use trackhold_core::law;
 use trackhold_core::node::Event;
 use trackhold_core::node::tuning::Tuning;
 use trackhold_core::plan::compile;
@@ -80,6 +81,10 @@ struct Bench {
 
 impl Bench {
     fn new(entry_items: usize) -> Self {
+        Self::on(SITE, entry_items)
+    }
+
+    fn on(site: &str, entry_items: usize) -> Self {
         let (inlets, outlets, mut ends) = lanes_with(entry_items);
         let (gate, shared) = (Arc::new(Gate::default()), Arc::new(Shared::default()));
         let socket = UdpSocket::bind("127.0.0.1:0").unwrap();
@@ -88,7 +93,7 @@ impl Bench {
         drive.set_nonblocking(true).unwrap();
         ends.drives.push([Some(drive.local_addr().unwrap()), None, None, None]).unwrap();
         let control = Loop::new(
-            &Site::parse(SITE, "test.toml").unwrap().settings,
+            &Site::parse(site, "test.toml").unwrap().settings,
             (Hex([3; 16]), 7),
             TimeNs(BEGIN_NS),
             inlets,
@@ -123,6 +128,14 @@ impl Bench {
         let event = Event::Order(OrderEvent { session: 2, sequence, received_ns: self.now, order });
         let ticket = (order == Order::Stop(StopKind::Emergency)).then(|| self.gate.trip(Source::Intake).0);
         self.ends.orders.push(Item { event, ticket }).unwrap();
+    }
+
+    fn start(&mut self, sequence: u64) {
+        let node = self.control.node();
+        let plan = node.plan().map(|plan| plan.digest()).unwrap();
+        let (boot, start_number) = (node.boot(), node.start_number());
+        let start = Start { boot, plan, start_number, at: StartAt::Beginning, plan_time_ns: 0 };
+        self.order(sequence, Order::Start(start));
     }
 
     fn plan(&mut self, sequence: u64, speed_m_s: f64) {
@@ -186,13 +199,7 @@ fn thousands_of_ticks_with_poses_orders_and_plans_neither_allocate_nor_free() {
             // A good plan, the same once more, one that is not fit, a start, plans while tracking, and stops.
             1 | 3 => bench.plan(k, speed(k)),
             5 => bench.plan(k, 30.0),
-            10 => {
-                let node = bench.control.node();
-                let plan = node.plan().map(|plan| plan.digest()).unwrap();
-                let (boot, start_number) = (node.boot(), node.start_number());
-                let start = Start { boot, plan, start_number, at: StartAt::Beginning, plan_time_ns: 0 };
-                bench.order(k, Order::Start(start));
-            }
+            10 => bench.start(k),
             // Caps and laws: good ones, one sent again, one that is not fit, and one that the plan does not fit.
             100 => bench.order(k, Order::Cap { share: 0.6 }),
             110 => bench.tune(k, SAMSON),
@@ -230,6 +237,30 @@ fn thousands_of_ticks_with_poses_orders_and_plans_neither_allocate_nor_free() {
     assert!(tracked > 3000 && loaded == 30, "{tracked} ticks tracking, {loaded} plans loaded");
     assert_eq!(laws, 20, "two laws a round");
     assert_eq!((bench.shared.entries_lost.load(SeqCst), bench.shared.ticks_late.load(SeqCst)), (0, 0));
+}
+
+const CAR: &str = "[vehicle]\nkind = \"car\"\nwheelbase_m = 1\nmax_speed_m_s = 1\nmax_accel_m_s2 = 1\n\
+                   max_steer_rad = 0.5\nmax_steer_rate_rad_s = 1\n[law]\nname = \"kanayama\"\n\
+                   [node]\nrate_hz = 1000\nplanner_lease_s = 0\n";
+
+#[test]
+fn no_law_allocates_or_frees_in_a_tick() {
+    for kind in law::KINDS {
+        let site = if kind.machines == law::Machines::Steered { CAR } else { SITE };
+        let mut bench = Bench::on(&site.replace("kanayama", kind.name), 8192);
+        let mut tracked = 0;
+        for k in 0..400 {
+            bench.pose(k, 0.0003 * k as f64);
+            match k {
+                1 => bench.plan(k, 0.3),
+                10 => bench.start(k),
+                _ => {}
+            }
+            assert_eq!(bench.turn(), 0, "{} in turn {k}", kind.name);
+            tracked += usize::from(bench.control.node().mode() == Mode::Tracking);
+        }
+        assert!(tracked > 380, "{}: {tracked} ticks tracking", kind.name);
+    }
 }
 
 #[test]

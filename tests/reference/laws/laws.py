@@ -259,7 +259,7 @@ def motion(case, t):
 
 def varying():
     """The same stages as the law's: one of a period, then steps, each with the motion in its middle; beyond them
-    1024 more steps with the mean motion of the steps."""
+    ten seconds, or up to the next power of two of steps, with the mean motion of the steps."""
     out = []
     g = {"q_along": 4.0, "q_cross": 10.0, "q_heading": 1.0, "r_speed": 1.0, "r_turn_rate": 1.0}
     for speed, turn in (((0.5, 0.0, 0.0), (0.0, 0.0, 0.8)), ((0.9, -0.3, 0.0), (0.2, 0.1, 0.0)),
@@ -271,11 +271,11 @@ def varying():
             steps = math.ceil(horizon / step - 1e-9)
             ahead = [motion(case, period + (i + 0.5) * step) for i in range(steps)]
             mean = sum(abs(v) for v, _ in ahead) / steps
-            v_tail = math.copysign(max(mean, 0.05), ahead[-1][0])
+            v_tail = math.copysign(mean, ahead[-1][0])
             w_tail = sum(w for _, w in ahead) / steps
             a, b = held(v_tail, w_tail, step)
             p = np.zeros((3, 3))
-            for _ in range(1024):
+            for _ in range(2 ** math.ceil(math.log2(10.0 / step))):
                 p, _ = backward(p, a, b, q * step, r * step)
             for v, w in reversed(ahead):
                 p, _ = backward(p, *held(v, w, step), q * step, r * step)

@@ -43,6 +43,8 @@ Literature
     method for an autonomous mobile robot", IEEE ICRA 1990.
     P. Morin, C. Samson, "Motion control of wheeled mobile robots", Springer
     Handbook of Robotics, chapter 34, 2008.
+    A. De Luca, G. Oriolo, C. Samson, "Feedback control of a nonholonomic
+    car-like robot", Springer LNCIS 229, 1998 (linear, nonlinear).
     Off-axle point: static feedback linearisation of the unicycle by the
     position of a point off the wheel axle (same chapter).
 
@@ -349,13 +351,44 @@ class OffAxle:
             self.integral = self.integral + self.error * self.dt
 
 
+class Scheduled:
+    """The linear design (De Luca, Oriolo, Samson) with an integral over the cross-track error, per metre travelled."""
+
+    def __init__(self, g, dt):
+        self.g, self.dt, self.integral, self.rate = g, dt, 0.0, 0.0
+
+    def shape(self, _eh):
+        return 1.0
+
+    def wanted(self, pose, ref, vd, wd):
+        g = self.g
+        c, s = math.cos(pose[2]), math.sin(pose[2])
+        dx, dy = ref[0] - pose[0], ref[1] - pose[1]
+        ex, ey, eh = c * dx + s * dy, -s * dx + c * dy, wrap(ref[2] - pose[2])
+        k = 2.0 * g["zeta"] * math.sqrt(wd * wd + g["b"] * vd * vd)
+        self.rate = -tracking_error(pose, ref)[1] * abs(vd)
+        return (vd * math.cos(eh) + k * ex,
+                wd + g["b"] * vd * self.shape(eh) * ey + k * eh + g["k_i"] * vd * self.integral)
+
+    def settle(self, changed):
+        if not changed:
+            self.integral += self.rate * self.dt
+
+
+class Nonlinear(Scheduled):
+    """The nonlinear design of the same."""
+
+    def shape(self, eh):
+        return 1.0 if eh == 0.0 else math.sin(eh) / eh
+
+
 NODE = {"min_plan_rate": 1.0, "blend_s": 0.0, "settle_rate_1_s": 2.0,
         "settle_distance_m": 1.0, "settle_heading_rad": 1.0}
 
 
 def in_regime(law, pose, ref, vd, wd):
     """The wanted (v, omega) of the feedback in force, and whether that is the law."""
-    if abs(vd) >= 1e-3 or isinstance(law, OffAxle):
+    if abs(vd) >= 1e-3 or isinstance(law, OffAxle) or (abs(wd) >= 1e-3 and isinstance(law, Scheduled)):
         return law.wanted(pose, ref, vd, wd), True
     if abs(wd) < 1e-3:
         return (0.0, 0.0), False
@@ -365,7 +398,7 @@ def in_regime(law, pose, ref, vd, wd):
     return (k * ex, wd - k * tracking_error(pose, ref)[2]), False
 
 
-LAWS = {"kanayama": Kanayama, "samson": Samson, "off-axle": OffAxle}
+LAWS = {"linear": Scheduled, "nonlinear": Nonlinear, "kanayama": Kanayama, "samson": Samson, "off-axle": OffAxle}
 
 
 # ---------------------------------------------------------------- the loop
@@ -476,6 +509,10 @@ def off_axle(xp, yp, kp, ki, ff):
     return {"x_p_m": xp, "y_p_m": yp, "k_p": kp, "k_i": ki, "feed_forward": ff}
 
 
+def scheduled(b, zeta, ki):
+    return {"b": b, "zeta": zeta, "k_i": ki}
+
+
 def case(name, law, gains, vehicle, rate, plan_start, start, segments):
     return {
         "name": name, "law": law, "gains": gains, "vehicle": vehicle, "rate_hz": rate,
@@ -521,6 +558,14 @@ CASES = [
          100.0, pose(0.5, 0.5, 0.7), pose(0.2, 0.75, 0.4),
          [line(2.0069, 0.5), arc(1.0, -1.8, 0.5), line(1.5031, 0.5, end=0.7),
           pivot(1.1, 0.8), arc(1.3, 2.2, 0.55), line(2.0043, 0.55)]),
+    case("linear-differential", "linear", scheduled(6.0, 0.8, 1.5), DIFFERENTIAL, 100.0,
+         pose(-0.4, 0.9, -0.6), pose(-0.6, 1.1, -0.9),
+         [line(2.5037, 0.5), arc(1.1, 1.6, 0.45), line(1.2051, 0.45, end=0.1), dwell(0.6533),
+          pivot(-1.4, 0.6), line(1.3027, 0.4, reverse=True), arc(1.2, -1.9, 0.5)]),
+    case("nonlinear-unicycle", "nonlinear", scheduled(9.0, 0.7, 0.0), UNICYCLE, 50.0,
+         pose(2.0, -1.0, 2.2), pose(2.2, -0.7, 1.2),
+         [line(2.207, 0.5), arc(0.9, -1.8, 0.45), line(1.403, 0.45, end=0.2), pivot(1.1, 0.7),
+          arc(1.2, 1.3, 0.4, reverse=True), line(1.809, 0.45, end=0.6)]),
 ]
 
 

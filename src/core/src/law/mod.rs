@@ -9,10 +9,12 @@ mod input;
 mod integral;
 mod kanayama;
 mod linear;
+mod lqr;
 mod nonlinear;
 mod off_axle;
 pub mod predictive;
 mod pure_pursuit;
+mod riccati;
 mod samson;
 mod stanley;
 mod way;
@@ -173,6 +175,7 @@ pub const KINDS: &[Kind] = &[
     linear::KIND,
     nonlinear::KIND,
     dynamic::KIND,
+    lqr::KIND,
     predictive::KIND,
     pure_pursuit::KIND,
     stanley::KIND,

@@ -7,7 +7,7 @@
 
 use super::integral::{self, CrossIntegral};
 use super::{Context, Domain, Input, Kind, Law, Machines, Wanted};
-use crate::geometry::BodyVelocity;
+use crate::geometry::{BodyVelocity, Direction};
 use crate::keys::{Bound, Key, Problem, Values};
 use crate::math;
 use alloc::boxed::Box;
@@ -71,11 +71,21 @@ impl Samson {
     }
 }
 
+/// The direction of a heading error; past the domain's edge that of the edge, so that the law stays finite and turns back.
+fn within_domain(error: Direction) -> Direction {
+    let edge = Direction::of(MAX_HEADING_ERROR_RAD);
+    if error.cos >= edge.cos {
+        error
+    } else {
+        Direction { sin: if error.sin < 0.0 { -edge.sin } else { edge.sin }, ..edge }
+    }
+}
+
 impl Law for Samson {
     fn control(&mut self, input: &Input<'_>) -> Wanted {
         let wanted = input.reference.velocity;
         let (x_e, y_e) = (input.error.along_m, input.error.cross_m);
-        let error = input.direction.relative_to(input.reference.direction);
+        let error = within_domain(input.direction.relative_to(input.reference.direction));
         let tan = error.sin / error.cos;
         let speed = wanted.speed_m_s;
         let turn_rate = wanted.turn_rate_rad_s

@@ -3,6 +3,7 @@
 use super::{Context, Input, Law, Steady, Wanted, build};
 use crate::geometry::{BodyVelocity, Pose};
 use crate::keys::Values;
+use crate::math;
 use crate::plan::Reference;
 use crate::vehicle::{self, Wheels, limit};
 use alloc::boxed::Box;
@@ -82,5 +83,33 @@ impl Machine {
         self.wheels = limited.wheels;
         self.pose = self.pose.moved(limited.body, seconds);
         wanted
+    }
+}
+
+/// SplitMix64 (Steele, Lea and Flood, OOPSLA 2014).
+#[derive(Clone, Copy, Debug)]
+pub(crate) struct Random(pub(crate) u64);
+
+impl Random {
+    pub(crate) fn bits(&mut self) -> u64 {
+        self.0 = self.0.wrapping_add(0x9e37_79b9_7f4a_7c15);
+        let mixed = (self.0 ^ (self.0 >> 30)).wrapping_mul(0xbf58_476d_1ce4_e5b9);
+        let mixed = (mixed ^ (mixed >> 27)).wrapping_mul(0x94d0_49bb_1331_11eb);
+        mixed ^ (mixed >> 31)
+    }
+
+    /// Evenly between two ends.
+    pub(crate) fn within(&mut self, low: f64, high: f64) -> f64 {
+        low + (high - low) * (self.bits() >> 11) as f64 / (1_u64 << 53) as f64
+    }
+
+    /// Positive, its logarithm evenly between those of two ends.
+    pub(crate) fn magnitude(&mut self, low: f64, high: f64) -> f64 {
+        math::exp(self.within(math::ln(low), math::ln(high)))
+    }
+
+    /// One of a list.
+    pub(crate) fn pick<T: Copy>(&mut self, from: &[T]) -> T {
+        from[(self.bits() % from.len() as u64) as usize]
     }
 }

@@ -5,8 +5,10 @@ use super::*;
 use crate::geometry::Pose;
 use crate::plan::Reference;
 
+mod bounded;
 mod designs;
 mod integrals;
+mod lyapunov;
 mod poles;
 mod singular;
 mod values;

@@ -46,7 +46,7 @@ fn columns(row: &Kept) -> [f64; 14] {
 #[test]
 fn every_case_agrees_with_scipy() {
     let all = cases();
-    assert_eq!(all.len(), 7);
+    assert_eq!(all.len(), 9);
     for case in &all {
         let (rows, _) = run(case);
         let table = table(&case.name);
