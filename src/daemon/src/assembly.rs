@@ -22,6 +22,7 @@ use std::net::{SocketAddr, UdpSocket};
 use std::sync::Arc;
 use std::sync::mpsc::{Receiver, sync_channel};
 use std::thread::JoinHandle;
+use trackhold_core::node::tuning;
 use trackhold_core::settings::Checked;
 use trackhold_core::time::SpanNs;
 use trackhold_proto::blob::{BootId, Hex};
@@ -140,7 +141,10 @@ impl Parts {
             Arc::clone(shared),
         )
         .map_err(|problems| anyhow!("the settings do not hold: {problems:?}"))?;
-        let summary = Summary::new(identity.boot, checked.vehicle.layout(), control.node().start_number());
+        let gains = tuning::gains_text(&checked.settings.law.gains);
+        let law = tuning::told(&checked.settings.law.name, gains, &*checked.law, &*checked.vehicle);
+        let summary =
+            Summary::new(identity.boot, checked.vehicle.layout(), control.node().start_number(), law);
         let publisher = Publisher::new(
             ends.entries,
             letters,

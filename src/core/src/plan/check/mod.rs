@@ -59,7 +59,8 @@ pub struct Following {
 
 impl Following {
     /// No law is asked.
-    const ANYWHERE: Self = Self { forward: true, reverse: true, at_rest: true };
+    const ANYWHERE: Self =
+        Self { forward: true, reverse: true, least_speed_m_s: 0.0, pivots: true, at_rest: true };
 }
 
 /// What a plan has to fit.
