@@ -10,6 +10,7 @@ use crate::intake::{Ends, Intake};
 use crate::lanes::{Bell, Item, Shared, lanes};
 use crate::mail::Mail;
 use crate::publish::Publisher;
+use crate::publish::margins::Margins;
 use crate::publish::status::Summary;
 use crate::site::Site;
 use crate::site::net::demand_loopback;
@@ -151,7 +152,7 @@ impl Parts {
             outlet.another()?,
             Arc::clone(shared),
             (site.net.ring_bytes, site.net.max_plan_bytes),
-            summary,
+            (summary, Margins::new(checked.margin())),
         );
         let supervisor = Supervisor {
             limit: SpanNs::from_seconds(checked.params.stall_periods * checked.params.period_s()),

@@ -149,3 +149,21 @@ fn a_cap_slows_a_machine_on_its_way_and_lifting_it_brings_it_back() {
     let last = rig.until_standby().pop().unwrap();
     assert_eq!(last.cause, Cause::PlanEnded);
 }
+
+#[test]
+fn a_law_that_is_too_fast_for_the_dead_time_is_flagged_at_speed() {
+    // Kanayama with k_y = 4: 2 rad/s at 1 m/s, times 0.1 s and half a period of 20 ms: 0.22.
+    let mut rig = Rig::new(&[("rate_hz", RATE_HZ), ("dead_time_s", 0.1)]);
+    assert_eq!(rig.load(r#"{"kind":"line","length_m":40,"speed_m_s":1}"#, false), None);
+    rig.send_pose(1);
+    assert_eq!(rig.start(), None);
+    let is_thin = |record: &TickRecord| record.has(flag::THIN_MARGIN);
+    assert!(rig.ticks(100).iter().all(is_thin));
+    rig.order(Order::Cap { share: 0.5 });
+    rig.ticks(100);
+    assert!(!rig.ticks(50).iter().any(is_thin), "within at half the speed");
+    assert_eq!(rig.tune(r#"{"name":"kanayama","gains":{"k_y":20,"k_heading":9}}"#), None);
+    assert!(rig.ticks(50).iter().all(is_thin), "and beyond again with stiffer gains");
+    rig.order(Order::Stop(StopKind::Emergency));
+    assert!(!rig.ticks(50).iter().any(is_thin), "at rest nothing can weave");
+}
