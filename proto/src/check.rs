@@ -83,5 +83,10 @@ pub(crate) fn status(status: &Status) -> Checked {
         ("along_error_m", status.along_error_m),
         ("cross_error_m", status.cross_error_m),
         ("heading_error_rad", status.heading_error_rad),
+    ])?;
+    finite(&[
+        ("plan_rate", status.plan_rate),
+        ("speed_cap", status.speed_cap),
+        ("bandwidth_rad_s", status.bandwidth_rad_s),
     ])
 }

@@ -6,7 +6,7 @@
 use crate::blob::{Blob, BootId, Digest, Text};
 use crate::check;
 use crate::codec::DecodeError;
-use crate::words::{Cause, Mode};
+use crate::words::{Cause, Mode, Regime};
 use bincode::{Decode, Encode};
 use serde::{Deserialize, Serialize};
 
@@ -267,6 +267,8 @@ pub struct Counters {
     pub entries_lost: u64,
     /// Ticks that came a whole period or more late.
     pub ticks_late: u64,
+    /// Ticks whose law had too thin a margin: its bandwidth times the delay left the safe range.
+    pub ticks_thin: u64,
 }
 
 /// What the daemon is doing.
@@ -321,7 +323,22 @@ pub struct Status {
     pub next_entry: u64,
     /// Counters since boot.
     pub counters: Counters,
+    /// How the node follows its plan.
+    pub regime: Regime,
+    /// How fast the plan's time runs, at most 1.
+    pub plan_rate: f64,
+    /// The operator's cap on that.
+    pub speed_cap: f64,
+    /// The law's bandwidth across the path at the machine's top speed, rad/s.
+    pub bandwidth_rad_s: f64,
+    /// The law in force.
+    pub law: Text<32>,
+    /// Its gains as a JSON object, defaults filled in; empty if they do not fit.
+    pub gains: Text<GAINS_BYTES>,
 }
+
+/// Most bytes of gains in a status.
+pub const GAINS_BYTES: usize = 600;
 
 /// Tells a planner which parts of its plan have not arrived, so that it need not send all of them again.
 #[derive(Clone, Copy, Debug, PartialEq, Encode, Decode, Serialize, Deserialize)]

@@ -112,7 +112,11 @@ fn largest() -> Vec<Envelope> {
         match &mut sample.message {
             Message::Ack(ack) => ack.text = Text::cut(&"\u{1}".repeat(900)),
             Message::Tune(tune) => tune.law = Text::cut(&"\u{1}".repeat(LAW_BYTES)),
-            Message::Status(status) => status.plan_id = Text::cut(&"\u{1}".repeat(64)),
+            Message::Status(status) => {
+                status.plan_id = Text::cut(&"\u{1}".repeat(64));
+                status.law = Text::cut(&"\u{1}".repeat(32));
+                status.gains = Text::cut(&"\u{1}".repeat(GAINS_BYTES));
+            }
             Message::JournalPart(part) => part.bytes = Blob::new(&[0xff; JOURNAL_BYTES]).unwrap(),
             Message::PlanPart(part) => {
                 part.total_bytes = u32::try_from(PART_BYTES).unwrap();

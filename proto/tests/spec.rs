@@ -102,6 +102,9 @@ fn word_at(sample: &str, at: usize, number: u32, field: &str) -> Option<String> 
     Some(json[field].as_str().unwrap().to_string())
 }
 
+/// Where the regime lies in the status that is the sample: behind an id of 24 bytes.
+const STATUS_REGIME: usize = 274 + 24;
+
 #[test]
 fn the_words_are_all_there_and_no_others() {
     let spec = Spec::read();
@@ -109,6 +112,7 @@ fn the_words_are_all_there_and_no_others() {
         ("mode", "command", 0, "mode"),
         ("wheel-layout", "command", 4, "layout"),
         ("cause", "status", 28, "cause"),
+        ("regime", "status", STATUS_REGIME, "regime"),
         ("stop-kind", "stop", 0, "stop"),
         ("start-at", "start", 56, "at"),
     ];

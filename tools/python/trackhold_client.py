@@ -42,6 +42,7 @@ WORDS = {
         "boot", "operator", "plan-ended", "not-settled", "plan-ran-dry", "ramp-ended", "stale-pose",
         "outside-law-domain", "law-not-finite", "stalled-loop", "lost-trip", "shutdown", "pose-jump",
     ),
+    "regime": ("none", "moving", "pivoting", "settling", "realigning"),
     "stop-kind": ("emergency", "controlled"),
     "start-at": ("beginning", "plan-time", "nearest"),
     "wheel-layout": ("body", "left-right", "speed-steer", "ackermann", "steered-wheel"),
@@ -88,7 +89,8 @@ KINDS: Dict[str, Tuple[int, Tuple[Tuple[str, str], ...]]] = {
         ("tick", "Q"), ("has_pose", "I"), ("x_m", "d"), ("y_m", "d"), ("heading_rad", "d"), ("pose_age_ns", "Q"),
         ("clock_offset_ns", "q"), ("along_error_m", "d"), ("cross_error_m", "d"), ("heading_error_rad", "d"),
         ("command_subscribers", "I"), ("journal_subscribers", "I"), ("oldest_entry", "Q"), ("next_entry", "Q"),
-        ("counters", "counters"),
+        ("counters", "counters"), ("regime", "regime"), ("plan_rate", "d"), ("speed_cap", "d"),
+        ("bandwidth_rad_s", "d"), ("law", "text 32"), ("gains", "text 600"),
     )),
     "time-request": (70, (("sent_ns", "Q"),)),
     "plan-missing": (71, (("digest", "hex 32"), ("missing", "I"), ("first", "I"), ("marks", "blob 1024"))),
@@ -96,7 +98,7 @@ KINDS: Dict[str, Tuple[int, Tuple[Tuple[str, str], ...]]] = {
 
 COUNTERS = (
     "datagrams", "malformed", "misdirected", "poses", "poses_refused", "orders_refused", "plans_refused",
-    "events_dropped", "entries_lost", "ticks_late",
+    "events_dropped", "entries_lost", "ticks_late", "ticks_thin",
 )
 
 NAMES = {number: name for name, (number, _) in KINDS.items()}
@@ -181,7 +183,7 @@ def _pack(of: str, value: Any) -> bytes:
     if of in WORDS:
         return struct.pack("<I", WORDS[of].index(value))
     if of == "counters":
-        return struct.pack("<10Q", *(value[name] for name in COUNTERS))
+        return struct.pack("<11Q", *(value[name] for name in COUNTERS))
     if " " not in of:
         values = value if of == "4d" else (value,)
         if of[-1] == "d":
@@ -201,7 +203,7 @@ def _unpack(of: str, data: bytes, at: int) -> Tuple[Any, int]:
             raise ValueError(f"there is no {of} {number}")
         return WORDS[of][number], at + 4
     if of == "counters":
-        return dict(zip(COUNTERS, struct.unpack_from("<10Q", data, at))), at + 80
+        return dict(zip(COUNTERS, struct.unpack_from("<11Q", data, at))), at + 88
     if " " not in of:
         values = struct.unpack_from("<" + of, data, at)
         if of[-1] == "d":

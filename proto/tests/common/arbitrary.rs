@@ -154,35 +154,50 @@ fn ack() -> BoxedStrategy<Ack> {
 
 fn status() -> BoxedStrategy<Status> {
     let words = (hex(), hex(), mode(), cause(), text(), 0..=1u32);
-    let numbers = proptest::array::uniform6(number());
-    let wholes = proptest::array::uniform17(whole());
-    (words, numbers, wholes, any::<i64>(), any::<[u32; 3]>())
-        .prop_map(|((boot, plan, mode, cause, plan_id, has_pose), f, w, clock_offset_ns, n)| Status {
-            boot,
-            start_number: w[0],
-            mode,
-            cause,
-            plan,
-            plan_id,
-            plan_revision: n[0],
-            plan_duration_ns: w[1],
-            plan_time_ns: w[2],
-            tick: w[3],
-            has_pose,
-            x_m: f[0],
-            y_m: f[1],
-            heading_rad: f[2],
-            pose_age_ns: w[4],
-            clock_offset_ns,
-            along_error_m: f[3],
-            cross_error_m: f[4],
-            heading_error_rad: f[5],
-            command_subscribers: n[1],
-            journal_subscribers: n[2],
-            oldest_entry: w[5],
-            next_entry: w[6],
-            counters: counters(&w[7..]),
-        })
+    let numbers = proptest::array::uniform9(number());
+    let wholes = proptest::array::uniform18(whole());
+    let law = (regime(), text(), text());
+    (words, numbers, wholes, (any::<i64>(), law), any::<[u32; 3]>())
+        .prop_map(
+            |(
+                (boot, plan, mode, cause, plan_id, has_pose),
+                f,
+                w,
+                (clock_offset_ns, (regime, law, gains)),
+                n,
+            )| Status {
+                boot,
+                start_number: w[0],
+                mode,
+                cause,
+                plan,
+                plan_id,
+                plan_revision: n[0],
+                plan_duration_ns: w[1],
+                plan_time_ns: w[2],
+                tick: w[3],
+                has_pose,
+                x_m: f[0],
+                y_m: f[1],
+                heading_rad: f[2],
+                pose_age_ns: w[4],
+                clock_offset_ns,
+                along_error_m: f[3],
+                cross_error_m: f[4],
+                heading_error_rad: f[5],
+                command_subscribers: n[1],
+                journal_subscribers: n[2],
+                oldest_entry: w[5],
+                next_entry: w[6],
+                counters: counters(&w[7..]),
+                regime,
+                plan_rate: f[6],
+                speed_cap: f[7],
+                bandwidth_rad_s: f[8],
+                law,
+                gains,
+            },
+        )
         .boxed()
 }
 
@@ -198,6 +213,7 @@ fn counters(w: &[u64]) -> Counters {
         events_dropped: w[7],
         entries_lost: w[8],
         ticks_late: w[9],
+        ticks_thin: w[10],
     }
 }
 

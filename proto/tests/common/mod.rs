@@ -175,7 +175,14 @@ pub(crate) fn status() -> Status {
             events_dropped: 18,
             entries_lost: 19,
             ticks_late: u64::MAX,
+            ticks_thin: 20,
         },
+        regime: Regime::Moving,
+        plan_rate: 0.375,
+        speed_cap: 0.4,
+        bandwidth_rad_s: 4.5,
+        law: Text::cut("kanayama"),
+        gains: Text::cut("{\"k_heading\":6.0,\"k_x\":1.5,\"k_y\":9.0}"),
     }
 }
 

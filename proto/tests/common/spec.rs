@@ -78,9 +78,10 @@ impl Spec {
             assert_eq!(from - begin, expected(offset, count), "offset of {name}.{field}");
             let value = self.value(kind_of, cursor);
             if size == "2+n" {
-                count = cursor.at - from - 2;
+                count += cursor.at - from - 2;
             }
-            assert_eq!(cursor.at - from, expected(size, count), "size of {name}.{field}");
+            let own = if size == "2+n" { cursor.at - from - 2 } else { 0 };
+            assert_eq!(cursor.at - from, expected(size, own), "size of {name}.{field}");
             match field.split_once('.') {
                 Some((outer, inner)) => fields.entry(outer).or_insert(json!({}))[inner] = value,
                 None => drop(fields.insert(field.to_string(), value)),

@@ -5,6 +5,7 @@ use crate::geometry::Mount;
 use crate::keys::{Bound, Key, Problem, Values};
 use crate::law::{self, Law};
 use crate::math::PI;
+use crate::node::margin::Margin;
 use crate::node::params::{self, Params};
 use crate::plan::check::{self, Terms, Thresholds};
 use crate::vehicle::{self, Vehicle};
@@ -106,6 +107,11 @@ impl Checked {
     /// What a law is built for.
     pub fn context(&self) -> law::Context {
         law_context(&self.vehicle, &self.params)
+    }
+
+    /// How near the law comes to what the dead time allows, at top speed.
+    pub fn margin(&self) -> Margin {
+        Margin::new(&*self.law, self.vehicle.top_speed_m_s(), &self.params)
     }
 
     /// What a plan has to fit.

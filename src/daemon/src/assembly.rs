@@ -10,6 +10,7 @@ use crate::intake::{Ends, Intake};
 use crate::lanes::{Bell, Item, Shared, lanes};
 use crate::mail::Mail;
 use crate::publish::Publisher;
+use crate::publish::margins::Margins;
 use crate::publish::status::Summary;
 use crate::site::Site;
 use crate::site::net::demand_loopback;
@@ -22,6 +23,7 @@ use std::net::{SocketAddr, UdpSocket};
 use std::sync::Arc;
 use std::sync::mpsc::{Receiver, sync_channel};
 use std::thread::JoinHandle;
+use trackhold_core::node::tuning;
 use trackhold_core::settings::Checked;
 use trackhold_core::time::SpanNs;
 use trackhold_proto::blob::{BootId, Hex};
@@ -140,14 +142,17 @@ impl Parts {
             Arc::clone(shared),
         )
         .map_err(|problems| anyhow!("the settings do not hold: {problems:?}"))?;
-        let summary = Summary::new(identity.boot, checked.vehicle.layout(), control.node().start_number());
+        let gains = tuning::gains_text(&checked.settings.law.gains);
+        let law = tuning::told(&checked.settings.law.name, gains, &*checked.law, &*checked.vehicle);
+        let summary =
+            Summary::new(identity.boot, checked.vehicle.layout(), control.node().start_number(), law);
         let publisher = Publisher::new(
             ends.entries,
             letters,
             outlet.another()?,
             Arc::clone(shared),
             (site.net.ring_bytes, site.net.max_plan_bytes),
-            summary,
+            (summary, Margins::new(checked.margin())),
         );
         let supervisor = Supervisor {
             limit: SpanNs::from_seconds(checked.params.stall_periods * checked.params.period_s()),

@@ -66,6 +66,9 @@ impl Daemon {
             identity.boot
         );
         tracing::info!("{CAUTION}");
+        if let Some(warning) = checked.margin().warning(&settings.law.name) {
+            tracing::warn!("{warning}");
+        }
         let (parts, trips) = Parts::new(&site, checked, identity, outlet, &common)?;
         let mut daemon = Self {
             address,

@@ -158,6 +158,7 @@ fn warnings(site: &Site, checked: &Checked) -> Vec<String> {
             "node.settle_time_s = 0: the run ends at the plan's end, wherever the machine then is".into(),
         );
     }
+    warnings.extend(checked.margin().warning(&checked.settings.law.name));
     warnings
 }
 
@@ -237,6 +238,26 @@ mod tests {
         ] {
             assert!(said.contains(line), "{said}");
         }
+    }
+
+    #[test]
+    fn a_law_too_fast_for_the_dead_time_is_warned_of() {
+        let text = |dead_time_s: f64| {
+            let site = format!(
+                "[vehicle]\nkind = \"unicycle\"\nmax_speed_m_s = 2\nmax_turn_rate_rad_s = 1\nmax_accel_m_s2 = 0.5\n\
+                 max_turn_accel_rad_s2 = 1\n[law]\nname = \"kanayama\"\n[node]\nrate_hz = 50\ndead_time_s = {dead_time_s}\n"
+            );
+            describe(&Site::parse(&site, "site.toml").unwrap()).unwrap()
+        };
+        // k_y = 4: 4 rad/s at 2 m/s, times dead time and 10 ms; 0.2 is the working rule.
+        assert!(!text(0.03).contains("max_bandwidth_delay = 0.2:"));
+        let said = text(0.05);
+        assert!(
+            said.contains(
+                "warning: law kanayama: its bandwidth of 4 rad/s at top speed, 2 m/s, times 0.06 s"
+            ) && said.contains("or plans of up to 1.667 m/s"),
+            "{said}"
+        );
     }
 
     #[test]

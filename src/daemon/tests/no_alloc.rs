@@ -207,7 +207,7 @@ fn thousands_of_ticks_with_poses_orders_and_plans_neither_allocate_nor_free() {
             115 => bench.tune(k, r#"{"name":"kanayama","gains":{"k_q":1}}"#),
             120 => bench.tune(k, r#"{"name":"off-axle","gains":{"x_p_m":-0.3}}"#),
             150 => bench.order(k, Order::Cap { share: 1.0 }),
-            180 => bench.tune(k, r#"{"name":"kanayama","gains":{"k_y":9}}"#),
+            180 => bench.tune(k, r#"{"name":"predictive"}"#),
             200 => bench.plan(k, 0.4),
             205 => bench.plan(k, 30.0),
             // Two that wait and take over, the second of them one that takes the place of a third, and one that steps.

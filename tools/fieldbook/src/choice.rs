@@ -28,20 +28,28 @@ impl LawChoice {
     /// # Errors
     /// What does not hold: no such law, no such gain, a value outside its bound.
     pub fn apply(&self, settings: &Settings) -> Result<Settings, Vec<Problem>> {
-        let same = self.law.as_ref().is_none_or(|name| *name == settings.law.name);
-        let name = self.law.clone().unwrap_or_else(|| settings.law.name.clone());
-        let kept = if same { settings.law.gains.clone() } else { Values::default() };
+        // Checked by itself first: a message about "--gain" should not be mixed with what else is wrong.
+        let law = self.over(&settings.law)?;
+        let chosen = Settings { law, ..settings.clone() };
+        Ok(chosen.checked()?.settings)
+    }
+
+    /// A law with this choice over it; its gains checked, but not whether it is made for a machine.
+    ///
+    /// # Errors
+    /// What does not hold: no such law, no such gain, a value outside its bound.
+    pub fn over(&self, law: &LawSettings) -> Result<LawSettings, Vec<Problem>> {
+        let same = self.law.as_ref().is_none_or(|name| *name == law.name);
+        let name = self.law.clone().unwrap_or_else(|| law.name.clone());
+        let kept = if same { law.gains.clone() } else { Values::default() };
         let mut given = Values::default();
         self.gains.iter().for_each(|(key, value)| given.set(key, *value));
-        // Checked by itself first: a message about "--gain" should not be mixed with what else is wrong.
-        let gains = law::changed(&name, &kept, &given)
-            .map_err(|problem| vec![problem])
-            .and_then(|gains| law::check(&name, &gains).map(|()| gains))
-            .map_err(|problems| {
-                problems.into_iter().map(|problem| problem.within("law")).collect::<Vec<_>>()
-            })?;
-        let chosen = Settings { law: LawSettings { name, gains }, ..settings.clone() };
-        Ok(chosen.checked()?.settings)
+        let gains = law::changed(&name, &kept, &given).map_err(|problem| vec![problem]);
+        let checked = gains.and_then(|gains| law::check(&name, &gains).map(|()| gains));
+        match checked {
+            Ok(gains) => Ok(LawSettings { name, gains }),
+            Err(problems) => Err(problems.into_iter().map(|problem| problem.within("law")).collect()),
+        }
     }
 }
 

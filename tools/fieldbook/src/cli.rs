@@ -47,6 +47,8 @@ pub enum Command {
     Reset(orders::ResetArgs),
     /// Caps the speed in percent of the plan's, also while the machine runs.
     Cap(orders::CapArgs),
+    /// Changes the law and its gains, also while the machine runs.
+    Tune(orders::TuneArgs),
     /// A daemon's journal into a track log.
     Record(record::Args),
     /// A daemon's journal as it comes, a line a tick.
@@ -73,6 +75,7 @@ impl Command {
             Self::Stop(args) => orders::run_stop(&args),
             Self::Reset(args) => orders::run_reset(&args),
             Self::Cap(args) => orders::run_cap(&args),
+            Self::Tune(args) => orders::run_tune(&args),
             Self::Record(args) => record::run(&args),
             Self::Tail(args) => tail::run(&args),
         }

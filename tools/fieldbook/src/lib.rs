@@ -13,7 +13,7 @@
 //! | [`open_loop`], [`poses`] | what a law would have commanded at given poses |
 //! | [`import`] | a path from another program's file into a plan |
 //! | [`client`] | the UDP client towards a daemon |
-//! | [`status`], [`orders`] | what a daemon is doing; plan, start, stop, reset, cap |
+//! | [`status`], [`orders`] | what a daemon is doing; plan, start, stop, reset, cap, tune |
 //! | [`pack`] | a plan of samples in its compact form |
 //! | [`record`], [`tail`] | a daemon's journal, into a log or as it comes |
 //! | [`demo`] | daemon, stand-in robot and recorder in one command |

@@ -1,10 +1,13 @@
-//! `fieldbook send-plan`, `start`, `stop`, `reset`, `cap`: orders to a daemon, repeated until their outcome is known.
+//! `fieldbook send-plan`, `start`, `stop`, `reset`, `cap`, `tune`: orders to a daemon, repeated until their outcome is known.
 
 mod cap;
 mod transfer;
+mod tune;
 
 pub use cap::{CapArgs, cap, run_cap};
 pub use transfer::send_plan;
+pub(crate) use tune::told as law_told;
+pub use tune::{TuneArgs, run_tune, tune};
 
 use crate::client::{Answer, Client, DEFAULT_ADDRESS, Pace};
 use crate::output;
@@ -231,19 +234,23 @@ fn read_plan(path: &Path) -> Result<Vec<u8>> {
     std::fs::read(path).with_context(|| format!("cannot read the plan {}", path.display()))
 }
 
+/// The outcome of an order as a JSON object.
+fn outcome(what: &str, answer: &Answer) -> serde_json::Value {
+    json!({
+        "order": what,
+        "accepted": answer.accepted(),
+        "text": answer.ack.text,
+        "plan": answer.ack.plan,
+        "round_trip_s": answer.round_trip.as_secs_f64(),
+        "sent": answer.sent,
+    })
+}
+
 fn tell(what: &str, answer: &Answer, to: &To, good: &str, bad: &str) -> Result<ExitCode> {
     let accepted = answer.accepted();
     let reason = answer.ack.text.as_str();
     let text = if to.json {
-        json!({
-            "order": what,
-            "accepted": accepted,
-            "text": reason,
-            "plan": answer.ack.plan,
-            "round_trip_s": answer.round_trip.as_secs_f64(),
-            "sent": answer.sent,
-        })
-        .to_string()
+        outcome(what, answer).to_string()
     } else if accepted {
         format!("{what} accepted: {good}")
     } else {

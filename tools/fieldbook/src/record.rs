@@ -12,6 +12,7 @@ use std::process::ExitCode;
 use std::sync::atomic::{AtomicBool, Ordering};
 use std::time::{Duration, Instant};
 use trackhold_proto::blob::BootId;
+use trackhold_proto::journal::{Body, Entry, flag, read_frame};
 
 /// A number asked for this often in vain is written as a gap (`PROTOCOL.md`, section 6).
 const GIVE_UP: u32 = 20;
@@ -62,6 +63,8 @@ pub struct Recording {
     pub lost: u64,
     /// The gaps, both ends included; what was left out among them.
     pub gaps: Vec<(u64, u64)>,
+    /// Ticks whose law had too thin a margin against dead time.
+    pub ticks_thin: u64,
     /// Bytes of entries written.
     pub bytes: u64,
     /// The boot that took the recorded one's place, if the daemon was restarted.
@@ -94,6 +97,7 @@ pub struct Recorder {
     pending_gap: Option<(u64, u64)>,
     gaps: Vec<(u64, u64)>,
     bytes: u64,
+    ticks_thin: u64,
     entries: u64,
     lost: u64,
 }
@@ -121,6 +125,7 @@ impl Recorder {
             pending_gap: None,
             gaps: Vec::new(),
             bytes: 0,
+            ticks_thin: 0,
             entries: 0,
             lost: 0,
         })
@@ -194,6 +199,7 @@ impl Recorder {
                     self.write_gap()?;
                     self.log.write_frame_bytes(&frame).context("cannot write the log")?;
                     self.entries += 1;
+                    self.ticks_thin += u64::from(is_thin_tick(&frame));
                     self.bytes += frame.len() as u64;
                 }
                 Some(Item::Gap(first, last)) => self.note_gap(first, last),
@@ -246,11 +252,20 @@ impl Recorder {
             lost: self.lost,
             gaps: self.gaps,
             bytes: self.bytes,
+            ticks_thin: self.ticks_thin,
             other_boot: self.follower.other_boot(),
             tally: self.follower.tally(),
             path: self.log.finish().context("cannot write the log's end mark")?,
         })
     }
+}
+
+/// True for a tick with the flag that its law's margin was too thin.
+fn is_thin_tick(frame: &[u8]) -> bool {
+    // A tick is short; a long plan is not read for this.
+    const SHORT: usize = 1024;
+    frame.len() <= SHORT
+        && matches!(read_frame(frame), Ok((Entry { body: Body::Tick(record), .. }, _)) if record.has(flag::THIN_MARGIN))
 }
 
 impl Recording {
@@ -263,6 +278,7 @@ impl Recording {
             "lost": self.lost,
             "gaps": self.gaps,
             "bytes": self.bytes,
+            "ticks_thin": self.ticks_thin,
             "asked_again": self.tally.asked_again,
             "duplicates": self.tally.duplicates,
             "damaged": self.tally.damaged,
@@ -279,6 +295,12 @@ impl Recording {
             text.push_str(&format!(
                 "the daemon was restarted (boot {other}): a log holds one boot, this one ends here; record again for the \
                  next\n"
+            ));
+        }
+        if self.ticks_thin > 0 {
+            text.push_str(&format!(
+                "in {} ticks the law was too fast for the dead time and the pose's age: trackhold check-config tells the margin\n",
+                self.ticks_thin
             ));
         }
         if self.gaps.is_empty() {

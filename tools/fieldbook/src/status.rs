@@ -1,13 +1,14 @@
 //! `fieldbook status`: what a daemon is doing, once.
 
 use crate::client::{Client, DEFAULT_ADDRESS};
+use crate::orders::law_told;
 use crate::output;
 use anyhow::Result;
 use serde_json::json;
 use std::process::ExitCode;
 use trackhold_proto::blob::Digest;
 use trackhold_proto::message::{Counters, Status};
-use trackhold_proto::words::Mode;
+use trackhold_proto::words::{Mode, Regime};
 
 /// Arguments of `status`.
 #[derive(Debug, clap::Args)]
@@ -43,6 +44,8 @@ pub fn told(status: &Status) -> String {
             status.along_error_m, status.cross_error_m, status.heading_error_rad
         ));
     }
+    lines.extend(pace(status).map(|pace| format!("pace      {pace}")));
+    lines.push(format!("law       {}", law_told(status)));
     lines.push(format!("ticks     {} since boot", status.tick));
     lines.push(format!(
         "journal   entries {} to {} at hand",
@@ -61,6 +64,13 @@ pub fn told(status: &Status) -> String {
         "counters  {}",
         if counted.is_empty() { "all 0".to_string() } else { counted.join(", ") }
     ));
+    if status.counters.ticks_thin > 0 {
+        lines.push(format!(
+            "warning   in {} ticks the law was too fast for the dead time and the pose's age: slower gains, a lower cap, or a \
+             fresher pose; trackhold check-config tells the margin",
+            status.counters.ticks_thin
+        ));
+    }
     lines.push(format!("boot      {}", status.boot));
     lines.push(format!("next      {}", advice(status)));
     lines.join("\n") + "\n"
@@ -95,6 +105,21 @@ fn pose(status: &Status) -> String {
     )
 }
 
+/// Regime and pace, where there is something to tell.
+fn pace(status: &Status) -> Option<String> {
+    let mut parts = Vec::new();
+    if status.regime != Regime::None {
+        parts.push(status.regime.to_string());
+    }
+    if status.plan_rate != 1.0 && matches!(status.mode, Mode::Tracking | Mode::ControlledStop) {
+        parts.push(format!("the plan's time runs at {:.3} of its pace", status.plan_rate));
+    }
+    if status.speed_cap != 1.0 {
+        parts.push(format!("capped at {:.1} %", 100.0 * status.speed_cap));
+    }
+    (!parts.is_empty()).then(|| parts.join(", "))
+}
+
 fn counters(counters: &Counters) -> impl Iterator<Item = (u64, &'static str)> {
     [
         (counters.datagrams, "datagrams"),
@@ -107,6 +132,7 @@ fn counters(counters: &Counters) -> impl Iterator<Item = (u64, &'static str)> {
         (counters.events_dropped, "events dropped"),
         (counters.entries_lost, "journal entries lost"),
         (counters.ticks_late, "ticks late"),
+        (counters.ticks_thin, "ticks with too thin a margin"),
     ]
     .into_iter()
 }
@@ -155,6 +181,7 @@ mod tests {
             oldest_entry: 0,
             next_entry: 12,
             counters: Counters { malformed: 3, ..Counters::default() },
+            ..crate::client::fake::status()
         }
     }
 
@@ -172,6 +199,26 @@ mod tests {
             assert!(text.contains(part), "{part} is not in\n{text}");
         }
         assert!(!text.contains("events dropped"));
+    }
+
+    #[test]
+    fn pace_and_law_are_told() {
+        let text = told(&Status {
+            mode: Mode::Tracking,
+            regime: Regime::Pivoting,
+            plan_rate: 0.25,
+            speed_cap: 0.4,
+            counters: Counters { ticks_thin: 7, ..Counters::default() },
+            ..status()
+        });
+        for part in [
+            "pace      pivoting, the plan's time runs at 0.250 of its pace, capped at 40.0 %\n",
+            "law       kanayama: k_heading 4, k_x 1, k_y 4; bandwidth 2.000 rad/s at top speed\n",
+            "warning   in 7 ticks the law was too fast",
+        ] {
+            assert!(text.contains(part), "{part} is not in\n{text}");
+        }
+        assert!(!told(&status()).contains("pace "), "nothing to tell at rest and without a cap");
     }
 
     #[test]

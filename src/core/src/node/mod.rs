@@ -9,6 +9,7 @@
 //! | [`params`] | the node's numbers |
 //! | `clock`, `intake` | poses: senders' clocks, lease, freshness |
 //! | `orders` | start gates, stop, reset, plans, acknowledgements |
+//! | [`margin`] | the law's bandwidth times the delay of the loop |
 //! | `tune` | what an operator changes while the machine runs |
 //! | [`tuning`] | from a tune's text to a law |
 //! | `mode` | the mode table |
@@ -23,6 +24,7 @@ mod ahead;
 mod carry;
 mod clock;
 mod intake;
+pub mod margin;
 pub mod mode;
 mod orders;
 mod pace;

@@ -25,6 +25,13 @@ pub const KEYS: &[Key] = &[
         "from a tick to the moment at which its command moves the machine; measure it, the laws reckon with it",
     ),
     Key::with_default(
+        "max_bandwidth_delay",
+        "",
+        0.2,
+        Bound::within(0.01, 10.0),
+        "warns where the law's bandwidth times dead time, half a period and the pose's age is greater; at 0.65 it is unstable",
+    ),
+    Key::with_default(
         "pose_timeout_s",
         "s",
         0.25,
@@ -266,6 +273,7 @@ pub const KEYS: &[Key] = &[
 pub struct Params {
     pub rate_hz: f64,
     pub dead_time: SpanNs,
+    pub max_bandwidth_delay: f64,
     pub pose_timeout: SpanNs,
     pub pose_lease: SpanNs,
     pub pose_slack_m: f64,
@@ -311,6 +319,7 @@ impl Params {
         let params = Self {
             rate_hz: values.get("rate_hz"),
             dead_time: span("dead_time_s"),
+            max_bandwidth_delay: values.get("max_bandwidth_delay"),
             pose_timeout: span("pose_timeout_s"),
             pose_lease: span("pose_lease_s"),
             pose_slack_m: values.get("pose_slack_m"),

@@ -38,6 +38,7 @@ impl Node {
         record.plan_rate = self.run.rate();
         record.speed_cap = self.run.cap();
         record.command = self.command();
+        self.note_margin(&mut record);
         self.carrier.commanded(at, self.vehicle.body(&self.wheels));
         self.ticks += 1;
         self.last_tick = Some(at);

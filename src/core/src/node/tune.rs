@@ -1,7 +1,7 @@
 //! What an operator changes while the machine runs: the speed cap, the law and its gains.
 
 use super::orders::Given;
-use super::tuning::Tuning;
+use super::tuning::{Tuning, told};
 use super::{Node, Sink};
 use crate::digest;
 use crate::law::Law;
@@ -9,7 +9,7 @@ use alloc::boxed::Box;
 use alloc::string::String;
 use alloc::vec::Vec;
 use trackhold_proto::blob::Digest;
-use trackhold_proto::journal::{AckEffect, Body, LawChanged, TuneEvent};
+use trackhold_proto::journal::{AckEffect, Body, TuneEvent};
 use trackhold_proto::message::LEAST_SHARE;
 use trackhold_proto::words::{Mode, Refusal};
 
@@ -60,13 +60,8 @@ impl Node {
         self.feedback.exchange(&mut tuning.law, self.vehicle.body(&self.wheels));
         let law = self.feedback.law();
         self.terms.following = law.domain().following();
-        let speed_m_s = self.vehicle.top_speed_m_s();
-        let changed = LawChanged {
-            name: tuning.name,
-            gains: core::mem::take(&mut tuning.gains),
-            bandwidth_rad_s: law.bandwidth_rad_s(speed_m_s),
-            speed_m_s,
-        };
+        let gains = core::mem::take(&mut tuning.gains);
+        let changed = told(tuning.name.as_str(), gains, law, &*self.vehicle);
         self.emit(Body::LawChanged(changed), sink);
         sink.retire_law(tuning);
         Ok(())

@@ -2,6 +2,7 @@
 
 use crate::keys::{Problem, Values};
 use crate::law::{self, Context, Law};
+use crate::vehicle::Vehicle;
 use alloc::boxed::Box;
 use alloc::format;
 use alloc::string::{String, ToString};
@@ -11,6 +12,7 @@ use core::fmt;
 use serde::de::{self, MapAccess, Visitor};
 use serde::{Deserialize, Deserializer};
 use trackhold_proto::blob::Text;
+use trackhold_proto::journal::LawChanged;
 
 /// A law that was built, with what the journal says of it.
 #[derive(Debug)]
@@ -57,6 +59,12 @@ pub fn gains_text(gains: &Values) -> String {
         Ok(json) => json,
         Err(error) => unreachable!("names and finite numbers always print: {error}"),
     }
+}
+
+/// What the journal says of a law that is in force on a machine.
+pub fn told(name: &str, gains: String, law: &dyn Law, vehicle: &dyn Vehicle) -> LawChanged {
+    let speed_m_s = vehicle.top_speed_m_s();
+    LawChanged { name: Text::cut(name), gains, bandwidth_rad_s: law.bandwidth_rad_s(speed_m_s), speed_m_s }
 }
 
 fn lines(problems: Vec<Problem>) -> Vec<String> {
@@ -142,6 +150,23 @@ mod tests {
         let read_back = alloc::format!(r#"{{"name":"samson","gains":{}}}"#, tuning.gains());
         assert_eq!(Tuning::build(&read_back, &cart()).unwrap().gains(), tuning.gains(), "to the same bits");
         assert!(Tuning::build(r#"{"name":"kanayama"}"#, &cart()).is_ok());
+    }
+
+    #[test]
+    fn every_laws_gains_fit_on_the_wire() {
+        use trackhold_proto::message::{GAINS_BYTES, LAW_BYTES};
+        // The longest number is one like -1.2345678901234567e-300.
+        const NUMBER: usize = 24;
+        for kind in law::KINDS {
+            let gains: usize = kind.gains.iter().map(|key| key.name.len() + "\"\":,".len() + NUMBER).sum();
+            assert!(gains + "{}".len() <= GAINS_BYTES, "{}: {gains}", kind.name);
+            let design: usize = law::design::KEYS.iter().map(|key| key.name.len() + 4 + NUMBER).sum();
+            assert!(
+                gains + design + kind.name.len() + 24 <= LAW_BYTES && kind.name.len() <= 32,
+                "{}",
+                kind.name
+            );
+        }
     }
 
     #[test]

@@ -4,6 +4,7 @@
 //! is, an emergency stop never waits behind it. Work is paced: so many bytes a turn for each who listens or asks.
 
 mod acks;
+pub mod margins;
 pub mod reader;
 pub mod ring;
 pub mod status;
@@ -12,6 +13,7 @@ use crate::lanes::{Bell, Shared, count};
 use crate::mail::{Form, Letter, Peer};
 use crate::zero::Outlet;
 use acks::{Acks, answer};
+use margins::Margins;
 use reader::{Place, Ranges, next_message};
 use ring::Ring;
 use rtrb::Consumer;
@@ -47,6 +49,7 @@ pub struct Publisher {
     shared: Arc<Shared>,
     ring: Ring,
     summary: Summary,
+    margins: Margins,
     acks: Acks,
     listeners: Vec<Listener>,
     askers: Vec<Asker>,
@@ -78,7 +81,7 @@ impl Publisher {
         outlet: Outlet,
         shared: Arc<Shared>,
         (ring_bytes, max_plan_bytes): (usize, usize),
-        summary: Summary,
+        (summary, margins): (Summary, Margins),
     ) -> Self {
         Self {
             entries,
@@ -87,6 +90,7 @@ impl Publisher {
             shared,
             ring: Ring::new(ring_bytes, max_plan_bytes),
             summary,
+            margins,
             acks: Acks::default(),
             listeners: Vec::new(),
             askers: Vec::new(),
@@ -161,6 +165,9 @@ impl Publisher {
                 Body::LawChanged(law) => tracing::info!("law {} {}", law.name.as_str(), law.gains),
                 Body::Note(Note::Refused { text }) => tracing::warn!("{}", text.as_str()),
                 _ => {}
+            }
+            if let Some(warning) = self.margins.warning(&entry.body) {
+                tracing::warn!("{warning}");
             }
             self.summary.add(&entry);
             self.ring.push(&entry);

@@ -3,8 +3,8 @@
 use crate::lanes::Shared;
 use std::sync::atomic::Ordering::SeqCst;
 use trackhold_proto::blob::{BootId, Digest, Text};
-use trackhold_proto::journal::{Body, Entry, PlanLoaded, TickRecord, flag};
-use trackhold_proto::message::{Counters, Status, WheelLayout};
+use trackhold_proto::journal::{Body, Entry, LawChanged, PlanLoaded, TickRecord, flag};
+use trackhold_proto::message::{Counters, GAINS_BYTES, Status, WheelLayout};
 use trackhold_proto::words::{Cause, Mode};
 
 /// Keeps the newest of everything.
@@ -15,32 +15,36 @@ pub struct Summary {
     cause: Cause,
     start_number: u64,
     plan: Option<PlanLoaded>,
+    law: LawChanged,
     tick: TickRecord,
     ticks: u64,
     poses: u64,
     poses_refused: u64,
     orders_refused: u64,
     plans_refused: u64,
+    ticks_thin: u64,
     /// Pose source in force, and the one before the newest pose, should that one be refused.
     source: u64,
     source_before: u64,
 }
 
 impl Summary {
-    /// Before the first entry; the start number is the node's first.
-    pub fn new(boot: BootId, layout: WheelLayout, start_number: u64) -> Self {
+    /// Before the first entry; the start number is the node's first, and so is the law.
+    pub fn new(boot: BootId, layout: WheelLayout, start_number: u64, law: LawChanged) -> Self {
         Self {
             boot,
             mode: Mode::Standby,
             cause: Cause::Boot,
             start_number,
             plan: None,
+            law,
             tick: TickRecord::blank(layout),
             ticks: 0,
             poses: 0,
             poses_refused: 0,
             orders_refused: 0,
             plans_refused: 0,
+            ticks_thin: 0,
             source: 0,
             source_before: 0,
         }
@@ -57,6 +61,7 @@ impl Summary {
             Body::Tick(record) => {
                 (self.mode, self.cause, self.start_number) = (record.mode, record.cause, record.start_number);
                 self.ticks = record.tick + 1;
+                self.ticks_thin += u64::from(record.has(flag::THIN_MARGIN));
                 self.tick = *record;
             }
             Body::ModeChange(change) => {
@@ -71,6 +76,7 @@ impl Summary {
                 self.poses_refused += 1;
                 self.source = self.source_before;
             }
+            Body::LawChanged(law) => self.law.clone_from(law),
             Body::PlanLoaded(loaded) => self.plan = Some(*loaded),
             Body::Ack(ack) if ack.refusal.is_some() && ack.order_kind == crate::worker::PLAN_KIND => {
                 self.plans_refused += 1;
@@ -120,6 +126,12 @@ impl Summary {
             oldest_entry: 0,
             next_entry: 0,
             counters: self.counters(shared),
+            regime: tick.regime,
+            plan_rate: tick.plan_rate,
+            speed_cap: tick.speed_cap,
+            bandwidth_rad_s: self.law.bandwidth_rad_s,
+            law: self.law.name,
+            gains: Text::cut(if self.law.gains.len() <= GAINS_BYTES { &self.law.gains } else { "" }),
         }
     }
 
@@ -135,6 +147,7 @@ impl Summary {
             events_dropped: shared.events_dropped.load(SeqCst),
             entries_lost: shared.entries_lost.load(SeqCst),
             ticks_late: shared.ticks_late.load(SeqCst),
+            ticks_thin: self.ticks_thin,
         }
     }
 }

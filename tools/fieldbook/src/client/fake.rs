@@ -10,7 +10,7 @@ use std::time::Duration;
 use trackhold_proto::blob::{BootId, Hex, Text};
 use trackhold_proto::header::MAX_DATAGRAM_BYTES;
 use trackhold_proto::message::{Ack, Counters, Status};
-use trackhold_proto::words::{Cause, Mode};
+use trackhold_proto::words::{Cause, Mode, Regime};
 use trackhold_proto::{Envelope, Message};
 
 /// A thread that answers until it is dropped.
@@ -125,5 +125,11 @@ pub(crate) fn status() -> Status {
         oldest_entry: 0,
         next_entry: 1,
         counters: Counters::default(),
+        regime: Regime::None,
+        plan_rate: 1.0,
+        speed_cap: 1.0,
+        bandwidth_rad_s: 2.0,
+        law: Text::cut("kanayama"),
+        gains: Text::cut("{\"k_heading\":4.0,\"k_x\":1.0,\"k_y\":4.0}"),
     }
 }

@@ -1,6 +1,7 @@
 //! An entry of the journal in one line, for people.
 
 use trackhold_proto::journal::{AckEffect, Body, Note, Order, TickRecord, flag};
+use trackhold_proto::words::Regime;
 
 /// The line, without its moment.
 pub(super) fn of(body: &Body) -> String {
@@ -103,7 +104,17 @@ fn ack(ack: &AckEffect) -> String {
 }
 
 fn tick(record: &TickRecord) -> String {
-    let mut line = format!("{:15} plan {:8.3} s ", record.mode, record.plan_time_ns as f64 / 1e9);
+    let mut line = record.mode.to_string();
+    if record.regime != Regime::None {
+        line.push_str(&format!(" {}", record.regime));
+    }
+    let mut line = format!("{line:20} plan {:8.3} s ", record.plan_time_ns as f64 / 1e9);
+    if record.plan_rate != 1.0 {
+        line.push_str(&format!(" rate {:.3} ", record.plan_rate));
+    }
+    if record.speed_cap != 1.0 {
+        line.push_str(&format!(" cap {:.1} % ", 100.0 * record.speed_cap));
+    }
     if record.has(flag::HAS_REFERENCE) {
         line.push_str(&format!(
             " along {:+.4} cross {:+.4} m heading {:+.4} rad ",
@@ -134,6 +145,17 @@ fn flags(bits: u32) -> impl Iterator<Item = &'static str> {
 mod tests {
     use super::*;
     use trackhold_proto::message::WheelLayout;
+
+    #[test]
+    fn a_tick_names_its_regime_and_whatever_slows_the_plan() {
+        let mut record = TickRecord::blank(WheelLayout::LeftRight);
+        let plain = of(&Body::Tick(record));
+        assert!(!plain.contains("rate") && !plain.contains("cap") && !plain.contains("none"), "{plain}");
+        record.mode = trackhold_proto::words::Mode::Tracking;
+        (record.regime, record.plan_rate, record.speed_cap) = (Regime::Moving, 0.35, 0.4);
+        let line = of(&Body::Tick(record));
+        assert!(line.starts_with("tracking moving      plan    0.000 s  rate 0.350  cap 40.0 % "), "{line}");
+    }
 
     #[test]
     fn a_tick_names_its_flags_and_hides_what_is_absent() {

@@ -67,7 +67,8 @@ fn a_law_changes_while_tracking_is_told_and_takes_over() {
     assert_eq!((rig.last_ack().order_kind, rig.node.mode()), (11, Mode::Tracking));
     let [law] = &rig.laws()[..] else { panic!("{:?}", rig.laws()) };
     assert_eq!(law.name.as_str(), "kanayama");
-    assert_eq!(law.gains, r#"{"k_heading":10.0,"k_i":0.0,"k_x":2.0,"k_y":25.0}"#);
+    let gains: Values = serde_json::from_str(&law.gains).unwrap();
+    assert_eq!((gains.get("k_x"), gains.get("k_y"), gains.get("k_heading")), (2.0, 25.0, 10.0));
     // The machine's 2 m/s times √k_y.
     assert_eq!((law.speed_m_s, law.bandwidth_rad_s), (2.0, 10.0));
     let settled = rig.ticks(30).pop().unwrap();
@@ -129,4 +130,40 @@ fn an_unfit_law_is_refused_with_findings_and_a_repetition_hears_the_first_outcom
     assert_eq!(rig.tune_again(r#"{"name":"kanayama"}"#), Some(Refusal::SequenceReused));
     assert_eq!(rig.order_again(Order::Reset), Some(Refusal::SequenceReused));
     assert_eq!(rig.laws().len(), 1);
+}
+
+#[test]
+fn a_cap_slows_a_machine_on_its_way_and_lifting_it_brings_it_back() {
+    let mut rig = Rig::started(r#"{"kind":"line","length_m":40,"speed_m_s":1}"#);
+    rig.ticks(100);
+    assert_eq!(rig.order(Order::Cap { share: 0.4 }), None);
+    let slowed = rig.ticks(150).pop().unwrap();
+    assert_eq!((slowed.plan_rate, slowed.speed_cap), (0.4, 0.4));
+    assert!((slowed.command.speed_m_s - 0.4).abs() < 0.02, "{slowed:?}");
+    assert_eq!(rig.order(Order::Cap { share: 1.0 }), None);
+    let back = rig.ticks(150).pop().unwrap();
+    assert_eq!(back.plan_rate, 1.0);
+    assert!((back.command.speed_m_s - 1.0).abs() < 0.02, "{back:?}");
+    let records: Vec<_> = rig.records().collect();
+    assert_within_steps(&records);
+    let last = rig.until_standby().pop().unwrap();
+    assert_eq!(last.cause, Cause::PlanEnded);
+}
+
+#[test]
+fn a_law_that_is_too_fast_for_the_dead_time_is_flagged_at_speed() {
+    // Kanayama with k_y = 4: 2 rad/s at 1 m/s, times 0.1 s and half a period of 20 ms: 0.22.
+    let mut rig = Rig::new(&[("rate_hz", RATE_HZ), ("dead_time_s", 0.1)]);
+    assert_eq!(rig.load(r#"{"kind":"line","length_m":40,"speed_m_s":1}"#, false), None);
+    rig.send_pose(1);
+    assert_eq!(rig.start(), None);
+    let is_thin = |record: &TickRecord| record.has(flag::THIN_MARGIN);
+    assert!(rig.ticks(100).iter().all(is_thin));
+    rig.order(Order::Cap { share: 0.5 });
+    rig.ticks(100);
+    assert!(!rig.ticks(50).iter().any(is_thin), "within at half the speed");
+    assert_eq!(rig.tune(r#"{"name":"kanayama","gains":{"k_y":20,"k_heading":9}}"#), None);
+    assert!(rig.ticks(50).iter().all(is_thin), "and beyond again with stiffer gains");
+    rig.order(Order::Stop(StopKind::Emergency));
+    assert!(!rig.ticks(50).iter().any(is_thin), "at rest nothing can weave");
 }
