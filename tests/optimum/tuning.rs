@@ -7,7 +7,8 @@
 //! ```
 //!
 //! names the laws; after a colon the gains to be searched, else all of the law's that are not zero. It prints sections for
-//! `gains.toml`; a person decides what goes there. What is found on the way goes to the error output.
+//! `gains.toml`, and a person decides what goes there; what is found on the way goes to the error output.
+//! `TRACKHOLD_TUNE_ON=stop,eight` looks at these scenarios alone.
 
 use crate::scenario::{self, Scenario};
 use crate::table::{self, Drive};
@@ -17,6 +18,8 @@ use trackhold_core::settings::Settings;
 
 /// Names the laws to tune.
 const VARIABLE: &str = "TRACKHOLD_TUNE";
+/// Names the scenarios to look at, if not all of them.
+const ON: &str = "TRACKHOLD_TUNE_ON";
 /// What a scenario counts that a law gave up: worse than any that it drove.
 const GIVEN_UP: f64 = 20.0;
 /// The greater, the more the worst scenario decides.
@@ -137,6 +140,10 @@ fn tune(request: &str, base: &Settings, scenarios: &[Scenario]) {
 fn tuning() {
     let requests = std::env::var(VARIABLE).unwrap_or_else(|_| panic!("{VARIABLE} names the laws to tune"));
     let base = scenario::settings();
-    let scenarios = scenario::all(&base.checked().unwrap().vehicle);
+    let mut scenarios = scenario::all(&base.checked().unwrap().vehicle);
+    if let Ok(names) = std::env::var(ON) {
+        scenarios.retain(|scenario| names.split(',').any(|name| name == scenario.name));
+        assert_eq!(scenarios.len(), names.split(',').count(), "{ON}={names}: not all of them are scenarios");
+    }
     requests.split(',').for_each(|request| tune(request, &base, &scenarios));
 }
