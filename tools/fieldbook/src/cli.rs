@@ -1,6 +1,6 @@
 //! The command line: one line a subcommand; each one's arguments and work are in its own file.
 
-use crate::{check, demo, import, orders, pack, record, replay, retime, simulate, status, tail};
+use crate::{check, demo, import, orders, pack, rank, record, replay, retime, simulate, status, tail};
 use clap::{Parser, Subcommand};
 use std::process::ExitCode;
 
@@ -25,6 +25,8 @@ pub enum Command {
     Check(check::Args),
     /// Closed loop in the core, faster than real time.
     Simulate(simulate::Args),
+    /// Every law that fits machine and plan, under the same errors: which one to choose.
+    Rank(rank::Args),
     /// A recorded run once more, compared bit for bit; or what a law would have commanded at recorded poses.
     Replay(replay::Args),
     /// The fastest timing of a plan within the limits, with a reserve for feedback.
@@ -64,6 +66,7 @@ impl Command {
         match self {
             Self::Check(args) => check::run(&args),
             Self::Simulate(args) => simulate::run(&args),
+            Self::Rank(args) => rank::run(&args),
             Self::Replay(args) => replay::run(&args),
             Self::Retime(args) => retime::run(&args),
             Self::Import(args) => import::run(&args),

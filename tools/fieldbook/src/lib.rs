@@ -8,6 +8,7 @@
 //! | [`check`] | whether a machine can follow a plan |
 //! | [`retime`] | the fastest timing of a plan within the limits |
 //! | [`simulate`], [`sim`] | closed loop in the core: the command and the loop itself |
+//! | [`rank`] | every law that fits, on one machine and plan |
 //! | [`stats`] | tracking errors of a run in numbers |
 //! | [`replay`] | a recorded run once more, compared bit for bit |
 //! | [`open_loop`], [`poses`] | what a law would have commanded at given poses |
@@ -31,6 +32,7 @@ pub mod orders;
 pub mod output;
 pub mod pack;
 pub mod poses;
+pub mod rank;
 pub mod record;
 pub mod replay;
 pub mod retime;
