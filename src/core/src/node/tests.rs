@@ -2,6 +2,7 @@
 
 mod continuing;
 mod live;
+mod regimes;
 
 use super::*;
 use crate::geometry::{BodyVelocity, Pose};
@@ -58,8 +59,12 @@ const LINE: &str = r#"{"kind":"line","length_m":4,"speed_m_s":1}"#;
 
 impl Rig {
     fn new(node: &[(&str, f64)]) -> Self {
+        Self::with_settings(&settings(node))
+    }
+
+    fn with_settings(settings: &Settings) -> Self {
         let mut log = Vec::new();
-        let node = Node::new(&settings(node), Hex([7; 16]), 99, TimeNs(0), &mut log).unwrap();
+        let node = Node::new(settings, Hex([7; 16]), 99, TimeNs(0), &mut log).unwrap();
         let mut rig = Self {
             node,
             log,
