@@ -229,6 +229,11 @@ impl General {
         Self { weight, slope, rows, bound, equations, scale }
     }
 
+    /// The general solver's usual settings, silent: as good as what the law's own solver is asked for.
+    pub fn usual() -> DefaultSettings<f64> {
+        DefaultSettings { verbose: false, ..DefaultSettings::default() }
+    }
+
     /// Settings in which its answer is good to well below a millionth.
     pub fn settings() -> DefaultSettings<f64> {
         DefaultSettingsBuilder::default()

@@ -56,7 +56,7 @@ fn spread(recorded: &[Recorded]) {
         .map(|one| {
             let form = General::new(one);
             least_us(|| {
-                black_box(form.solve(General::settings())).expect("it is solved");
+                black_box(form.solve(General::usual())).expect("it is solved");
             })
         })
         .collect();
@@ -89,7 +89,7 @@ fn programs(criterion: &mut Criterion) {
     let general: Vec<General> = recorded[..100].iter().map(General::new).collect();
     group.bench_function("Clarabel", |bencher| {
         bencher.iter_batched(
-            General::settings,
+            General::usual,
             |settings| {
                 for one in &general {
                     black_box(one.solve(settings.clone())).expect("it is solved");

@@ -34,6 +34,14 @@ pub(super) const KEYS: &[Key] = &[
         "what an input costs that is off the reference's by its greatest value; more of it is calmer and slower",
     ),
     Key::with_default(
+        "change_m2_s2",
+        "m²·s²",
+        4e-4,
+        Bound::within(1e-6, 100.0),
+        "what an input costs that changes otherwise than the reference's, by its greatest value in a second; more of it lets \
+         less of the poses' noise through to the wheels",
+    ),
+    Key::with_default(
         "tail_effort_m2",
         "m²",
         0.01,
@@ -57,6 +65,8 @@ pub(super) struct Weights {
     pub(super) error: [f64; 3],
     /// Of the inputs' deviation from the reference's, in shares of their greatest value.
     pub(super) effort: f64,
+    /// Of the inputs' rates of change, in the same shares per second.
+    pub(super) change: f64,
     pub(super) tail_effort: f64,
 }
 
@@ -66,6 +76,7 @@ impl Weights {
             step_s: gains.get("step_s"),
             error: [1.0, gains.get("cross_weight"), gains.get("heading_weight_m2_rad2")],
             effort: gains.get("effort_m2"),
+            change: gains.get("change_m2_s2"),
             tail_effort: gains.get("tail_effort_m2"),
         }
     }

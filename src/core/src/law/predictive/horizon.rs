@@ -28,6 +28,10 @@ pub(super) struct Knot {
     pub(super) weight: [f64; 6],
     /// Weight of the inputs' deviation from the reference's.
     pub(super) effort: f64,
+    /// How the reference's inputs change in the step, as far as the machine's can, 1/s.
+    pub(super) rates: Shares,
+    /// Weight of the rates' deviation from those.
+    pub(super) change: f64,
 }
 
 /// The horizon of one tick.
@@ -45,8 +49,18 @@ pub(super) struct Horizon<const N: usize> {
 impl<const N: usize> Horizon<N> {
     pub(super) const BLANK: Self = {
         let pose = Pose::new(0.0, 0.0, 0.0);
-        let (shares, weight) = ([0.0; 2], [0.0; 6]);
-        let knot = Knot { length_s: 0.0, reach_s: 0.0, change_s: 0.0, pose, shares, weight, effort: 0.0 };
+        let (shares, rates, weight) = ([0.0; 2], [0.0; 2], [0.0; 6]);
+        let knot = Knot {
+            length_s: 0.0,
+            reach_s: 0.0,
+            change_s: 0.0,
+            pose,
+            shares,
+            rates,
+            weight,
+            effort: 0.0,
+            change: 0.0,
+        };
         Self { knots: [knot; N], pose, heading_rad: 0.0, shares }
     };
 
@@ -63,7 +77,8 @@ impl<const N: usize> Horizon<N> {
         self.shares = machine.of_last(&input.wheels, input.motion);
         self.heading_rad = input.pose.heading_rad - heading_error_rad;
         let mut heading = self.heading_rad;
-        let (mut at_s, mut wheels) = (0.0, input.wheels);
+        let mut at_s = 0.0;
+        let (mut shares, mut wheels) = machine.of_reference(&input.reference, &input.wheels);
         let step_s = weights.step_s.max(period_s);
         let mut reference = input.reference;
         for (index, knot) in self.knots.iter_mut().enumerate() {
@@ -72,6 +87,8 @@ impl<const N: usize> Horizon<N> {
             reference = input.ahead.reference(at_s);
             heading += math::wrap(reference.pose.heading_rad - heading);
             (knot.shares, wheels) = machine.of_reference(&reference, &wheels);
+            knot.rates = machine.rates(shares, knot.shares, length_s);
+            shares = knot.shares;
             knot.length_s = length_s;
             knot.reach_s = 0.5 * (length_s + period_s);
             knot.change_s = if index == 0 { input.seconds } else { length_s };
@@ -80,6 +97,7 @@ impl<const N: usize> Horizon<N> {
             let until_next = if index + 1 < N { step_s } else { 0.0 };
             let duration = 0.5 * (length_s + until_next);
             knot.effort = weights.effort * duration;
+            knot.change = weights.change * length_s;
             let [along, cross, heading] = weights.error;
             let weight = [along, 0.0, 0.0, cross, 0.0, heading].map(|weight| weight * duration);
             knot.weight = out_of_frame(&weight, reference.direction);

@@ -102,6 +102,12 @@ impl Machine {
         (changes.map(|(down, _)| down), changes.map(|(_, up)| up))
     }
 
+    /// The rates that lead from shares to others, as far as the limits allow, 1/s.
+    pub(super) fn rates(&self, from: Shares, to: Shares, seconds: f64) -> Shares {
+        let reached = self.toward(from, to, seconds);
+        core::array::from_fn(|at| (reached[at] - from[at]) / seconds)
+    }
+
     /// What a unit weight of each share weighs in terms of speed (per m²/s²) and turn rate (per rad²/s²). With a steered
     /// wheel, where the turn rate hangs on the speed, of the greatest of both.
     pub(super) fn effort(&self) -> [f64; 2] {

@@ -1,11 +1,14 @@
-//! Prediction within the limits: each tick the inputs over a horizon of about a second are chosen so that the error ahead
-//! costs least, with what the machine can do as bounds; the first of them is the command.
+//! Prediction within the limits: each tick the inputs over a horizon of about two seconds are chosen so that the error
+//! ahead costs least, with what the machine can do as bounds; the first of them is the command.
 //!
-//! The cost is ∫ e_x² + w_y e_y² + w_φ e_φ² + r |u − u_d|² dt in the reference's frame, and after the horizon's end what
-//! the linear-quadratic law would still pay (`tail`). The motion is the nonlinear one: each tick it is predicted anew
-//! from the inputs of the tick before, the cost is made quadratic about it, and the program of [`qp`] is solved once. A
-//! change that does not lower the true cost is halved, and left out at the end: the cost never grows from one iterate to
-//! the next.
+//! The cost is ∫ e_x² + w_y e_y² + w_φ e_φ² + r |u − u_d|² + c |u' − u_d'|² dt in the reference's frame, and after the
+//! horizon's end what the linear-quadratic law would still pay (`tail`). The motion is the nonlinear one: each tick it is
+//! predicted anew from the inputs of the tick before, the cost is made quadratic about it, and the program of [`qp`] is
+//! solved once. A change that does not lower the true cost is halved, and left out at the end: the cost never grows from
+//! one iterate to the next.
+//!
+//! The horizon was set by measuring: from 2.8 rad off, the integral of the errors' squares is 1.28 times the least with
+//! steps of 0.05 s and 1.0001 times with 0.1 s; a horizon of one second does not see that turning round at once pays.
 //!
 //! Where the law has no prediction to go on from it improves two simple motions a few times and takes the cheaper: the one
 //! under the law [`FALLBACK`], and the one that turns on the spot first. Later a simple motion takes over whenever it is
@@ -61,6 +64,9 @@ const FIRST_ROUNDS: u32 = 3;
 
 /// A change that does not lower the cost is halved so often.
 const HALVINGS: u32 = 3;
+
+/// Newton's steps for the bandwidth: on a cubic from above each takes off a third of what is left at least.
+const NEWTON_STEPS: u32 = 40;
 
 /// How far the heading error is followed beyond a half turn before it counts from the other side, rad.
 const FOLLOWED_PAST_RAD: f64 = 1.0;
@@ -208,10 +214,19 @@ impl<const N: usize> Law for Predictive<N> {
     }
 
     fn bandwidth_rad_s(&self, speed_m_s: f64) -> f64 {
-        // Where no limit binds: y' = v φ, φ' = ω with the weights q_y, q_φ of the errors and r of ω has the closed loop's
-        // poles among the roots of s⁴ − (q_φ/r) s² + q_y v²/r, whose natural frequency is (q_y v²/r)^¼ (textbook).
-        let effort = self.weights.effort * self.machine.effort()[1];
-        math::sqrt(math::sqrt(self.weights.error[1] * speed_m_s * speed_m_s / effort))
+        // Where no limit binds the chain y' = v φ, φ' = ω, ω' = a with the weights q of y, r of ω and c of a: the
+        // frequency, x its square, at which effort and change weigh as much as the error, q v² = c x³ + r x². With c = 0
+        // that is the natural frequency (q v²/r)^¼ of the chain of two. The weight of the heading only damps.
+        let [_, of_turn_rate] = self.machine.effort();
+        let (effort, change) = (self.weights.effort * of_turn_rate, self.weights.change * of_turn_rate);
+        let error = self.weights.error[1] * speed_m_s * speed_m_s;
+        let mut square = math::sqrt(error / effort);
+        for _ in 0..NEWTON_STEPS {
+            let value = (change * square + effort) * square * square - error;
+            let slope = (3.0 * change * square + 2.0 * effort) * square;
+            square -= if slope > 0.0 { value / slope } else { 0.0 };
+        }
+        math::sqrt(square)
     }
 
     fn reset(&mut self, motion: BodyVelocity) {

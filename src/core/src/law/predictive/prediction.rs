@@ -11,10 +11,6 @@ use super::qp::{Course, Program, Stage};
 use crate::geometry::{BodyVelocity, Direction, Pose};
 use crate::math;
 
-/// Weight of a rate's deviation from the predicted one, s²·m² per second of a step: it keeps the program's Hessian away
-/// from singular, and no deviation is left to weigh once the prediction is best.
-const RATE_WEIGHT: f64 = 1e-6;
-
 /// A predicted motion.
 #[derive(Clone, Copy, Debug)]
 pub(super) struct Prediction<const N: usize> {
@@ -67,9 +63,9 @@ impl<const N: usize> Prediction<N> {
             let next = machine.toward(shares, wanted(index, pose, shares), knot.change_s);
             let motion = machine.body(mean(shares, next, knot));
             pose = Move::new(pose.heading_rad, motion, knot.length_s).from(pose);
+            self.cost += cost(knot, pose, next) + change_cost(knot, shares, next);
             shares = next;
             (self.shares[index], self.poses[index]) = (shares, pose);
-            self.cost += cost(knot, pose, shares);
         }
     }
 
@@ -80,6 +76,7 @@ impl<const N: usize> Prediction<N> {
         for ((stage, knot), (end, next)) in steps {
             change(stage, knot, machine, pose, mean(shares, *next, knot));
             weigh(stage, knot, *end, *next);
+            weigh_change(stage, knot, shares, *next);
             bound(stage, knot, machine, shares, *next);
             (pose, shares) = (*end, *next);
         }
@@ -127,6 +124,17 @@ fn cost(knot: &Knot, pose: Pose, shares: Shares) -> f64 {
         + 0.5 * knot.effort * (effort[0] * effort[0] + effort[1] * effort[1])
 }
 
+/// What a step's change of the inputs costs.
+fn change_cost(knot: &Knot, begin: Shares, end: Shares) -> f64 {
+    let [first, second] = rates_off(knot, begin, end);
+    0.5 * knot.change * (first * first + second * second)
+}
+
+/// How far the rates are off the reference's.
+fn rates_off(knot: &Knot, begin: Shares, end: Shares) -> Shares {
+    core::array::from_fn(|side| (end[side] - begin[side]) / knot.length_s - knot.rates[side])
+}
+
 /// The pose cost's slope, and the error in the site frame.
 fn slope(knot: &Knot, pose: Pose) -> ([f64; 3], [f64; 3]) {
     let (x, y, heading) =
@@ -164,8 +172,11 @@ fn weigh(stage: &mut Stage, knot: &Knot, end: Pose, shares: Shares) {
     stage.pose_slope = slope(knot, end).0;
     stage.input_weight = [knot.effort, 0.0, knot.effort];
     stage.input_slope = core::array::from_fn(|side| knot.effort * (shares[side] - knot.shares[side]));
-    stage.rate_weight = [RATE_WEIGHT * knot.length_s; 2];
-    stage.rate_slope = [0.0; 2];
+}
+
+fn weigh_change(stage: &mut Stage, knot: &Knot, begin: Shares, end: Shares) {
+    stage.rate_weight = [knot.change; 2];
+    stage.rate_slope = rates_off(knot, begin, end).map(|off| knot.change * off);
 }
 
 /// The room that limits leave beside the prediction. The prediction itself is always within.
