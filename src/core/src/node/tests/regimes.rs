@@ -198,6 +198,14 @@ impl Late {
     }
 }
 
+impl Late {
+    /// How far the true pose is from the reference at the moment at which a tick's command acts, m.
+    fn off(&self, record: &TickRecord) -> f64 {
+        let index = record.tick as usize - 2 + self.dead_ticks;
+        self.truth[index].distance_to(Pose::new(record.ref_x_m, record.ref_y_m, record.ref_heading_rad))
+    }
+}
+
 #[test]
 fn a_late_pose_is_carried_forward_to_the_moment_at_which_the_command_acts() {
     // Commands act three ticks late, poses are five ticks old.
@@ -210,17 +218,13 @@ fn a_late_pose_is_carried_forward_to_the_moment_at_which_the_command_acts() {
         assert!(crate::math::wrap(seen.heading_rad - truth.heading_rad).abs() < 1e-9);
         assert_eq!(record.pose_age_ns, 100_000_000);
     }
-    let settled = records[400..].iter().map(|record| record.cross_error_m.abs()).fold(0.0, f64::max);
-    assert!(settled < 5e-4, "{settled}");
-    // Without, the law sees the pose of 0.1 s ago, and the machine is off the circle for good.
+    assert!(late.off(&records[590]) < 1e-4, "{}", late.off(&records[590]));
+    // Without, the law takes the machine for where it was 0.16 s ago, and drives that far ahead.
     let mut late = Late::started(&[("dead_time_s", 0.06), ("carry_forward", 0.0)], 3, 5);
     let records: Vec<TickRecord> = (0..600).map(|_| late.tick()).collect();
-    let index = 500;
-    let seen = Pose::new(records[index].x_m, records[index].y_m, records[index].heading_rad);
-    assert!(seen.distance_to(late.truth[index - 5]) < 1e-12);
-    let off =
-        late.truth[450..600].iter().map(|pose| (pose.distance_to(Pose::new(0.0, 2.0, 0.0)) - 2.0).abs());
-    assert!(off.fold(0.0, f64::max) > 0.005);
+    let seen = Pose::new(records[500].x_m, records[500].y_m, records[500].heading_rad);
+    assert!(seen.distance_to(late.truth[500 - 5]) < 1e-12);
+    assert!((late.off(&records[590]) - 0.16).abs() < 1e-3, "{}", late.off(&records[590]));
 }
 
 #[test]
