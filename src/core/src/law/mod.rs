@@ -66,8 +66,8 @@ impl Domain {
 
     /// The domain as a plan's check asks for it.
     pub const fn following(&self) -> Following {
-        let Self { forward, reverse, least_speed_m_s, pivots, at_rest, .. } = *self;
-        Following { forward, reverse, least_speed_m_s, pivots, at_rest }
+        let Self { forward, reverse, least_speed_m_s, .. } = *self;
+        Following { forward, reverse, least_speed_m_s }
     }
 
     /// Whether a plan's ways of driving lie in the domain: the direction that does not, as "reverse?".

@@ -2,9 +2,7 @@
 
 use serde_json::{Value, json};
 use std::fmt::Write as _;
-use trackhold_core::plan::check::{
-    Fault, Finding, Peak, Place, Report, SegmentReport, Severity, Where, limit_name,
-};
+use trackhold_core::plan::check::{Finding, Peak, Place, Report, SegmentReport, Severity, Where, limit_name};
 use trackhold_core::vehicle::LimitName;
 
 /// The text names no more segments than this; JSON has them all.
@@ -160,7 +158,7 @@ fn write_finding(text: &mut String, number: usize, finding: &Finding) -> std::fm
             "     {:.3} {unit} into the segment, at x {:.3} m, y {:.3} m",
             place.progress, place.pose.x_m, place.pose.y_m
         )?;
-        if finding.places > 1 && finding.fault != Fault::LawAtRest {
+        if finding.places > 1 {
             write!(text, "; the worst of {} places", finding.places)?;
         }
         writeln!(text)?;

@@ -108,7 +108,7 @@ fn a_law_that_cannot_follow_the_plan_is_refused_and_so_is_a_plan_that_the_new_la
     rig.ticks(10);
     assert_eq!(rig.tune(BEHIND), Some(Refusal::LawDirection { reverse: false }));
     assert_eq!(rig.tune(AHEAD), None);
-    assert!(!rig.node.terms().following.reverse && rig.node.terms().following.at_rest);
+    assert!(!rig.node.terms().following.reverse);
     rig.until_standby();
     let back = r#"{"kind":"line","length_m":2,"speed_m_s":0.5,"reverse":true}"#;
     assert_eq!(rig.load(back, false), Some(Refusal::LawDirection { reverse: true }));

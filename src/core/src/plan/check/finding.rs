@@ -73,8 +73,6 @@ pub enum Fault {
     LawDirection,
     /// A segment slower than the law steers for by itself.
     LawSpeed,
-    /// Rests or pivots, for a law without feedback there.
-    LawAtRest,
 }
 
 impl Fault {
@@ -99,7 +97,6 @@ impl Fault {
             Self::Limit(limit) => limit_name(limit),
             Self::LawDirection => "law-direction",
             Self::LawSpeed => "law-speed",
-            Self::LawAtRest => "law-at-rest",
         }
     }
 
@@ -124,7 +121,6 @@ impl Fault {
             Self::Limit(limit) => limit.words(),
             Self::LawDirection => "speed against the law's direction",
             Self::LawSpeed => "greatest speed, below the least that the law steers for by itself,",
-            Self::LawAtRest => "the law does not correct the heading",
         }
     }
 
@@ -162,9 +158,6 @@ impl Fault {
             Self::Limit(_) => "slow down or turn wider",
             Self::LawDirection => "choose another law, or the other sign of law.gains.x_p_m",
             Self::LawSpeed => "nothing: the law it falls back to steers; or lower law.gains.least_speed_m_s",
-            Self::LawAtRest => {
-                "nothing, unless the machine drifts there; lqr and off-axle keep their feedback at rest"
-            }
         }
     }
 }

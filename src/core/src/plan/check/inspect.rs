@@ -46,9 +46,6 @@ pub(super) struct Inspector<'a> {
     peaks: [Option<(f64, Load, Look)>; LIMITS],
     curvature: f64,
     curvature_rate: f64,
-    /// Segments in which the reference rests or turns on the spot without the law's feedback, and the first such look.
-    pub(super) still: Option<(Look, u64)>,
-    still_in: Option<usize>,
     /// The fastest look of the segment at hand.
     fastest: Option<Look>,
     narrowed: u32,
@@ -74,8 +71,6 @@ impl<'a> Inspector<'a> {
             peaks: [None; LIMITS],
             curvature: 0.0,
             curvature_rate: 0.0,
-            still: None,
-            still_in: None,
             fastest: None,
             narrowed: 0,
             steering: terms.vehicle.layout().is_steered().then(Steering::default),
@@ -336,16 +331,6 @@ impl<'a> Inspector<'a> {
     fn directions(&mut self, look: &Look) {
         let speed = look.reference.velocity.speed_m_s;
         if steps::on_the_spot(look) || steps::rests(look) {
-            let dwells = self.previous.is_some_and(|previous| {
-                let stood = steps::on_the_spot(&previous) || steps::rests(&previous);
-                stood && previous.slot == look.slot && previous.t_s < look.t_s
-            });
-            let corrected = if steps::rests(look) { self.following.at_rest } else { self.following.pivots };
-            if dwells && !corrected && self.still_in != Some(look.slot) {
-                self.still_in = Some(look.slot);
-                let (first, count) = self.still.unwrap_or((*look, 0));
-                self.still = Some((first, count + 1));
-            }
             return;
         }
         let way = if speed < 0.0 { -1.0 } else { 1.0 };

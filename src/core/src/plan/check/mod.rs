@@ -51,16 +51,11 @@ pub struct Following {
     pub reverse: bool,
     /// The slowest reference that it steers for by itself, m/s.
     pub least_speed_m_s: f64,
-    /// It corrects the heading also while the reference turns on the spot.
-    pub pivots: bool,
-    /// It corrects the heading also while the reference rests.
-    pub at_rest: bool,
 }
 
 impl Following {
     /// No law is asked.
-    const ANYWHERE: Self =
-        Self { forward: true, reverse: true, least_speed_m_s: 0.0, pivots: true, at_rest: true };
+    const ANYWHERE: Self = Self { forward: true, reverse: true, least_speed_m_s: 0.0 };
 }
 
 /// What a plan has to fit.
@@ -225,28 +220,9 @@ fn inspect(plan: Plan, terms: &Terms, detailed: bool) -> Report {
     walk(&plan, &mut |look| inspector.look(look));
     let last = plan.slots.len() - 1;
     inspector.end((!plan.open).then_some(Look { slot: last, t_s: plan.duration_s, reference: plan.end }));
-    note_stillness(&mut inspector, &plan);
     let Inspector { ledger, segments, .. } = inspector;
     let (findings, counts) = (ledger.findings, ledger.counts);
     Report { findings, counts, segments, plan: Some(plan) }
-}
-
-/// Rests and pivots, where the law has no feedback of the heading: one finding for the plan.
-fn note_stillness(inspector: &mut Inspector<'_>, plan: &Plan) {
-    let Some((look, places)) = inspector.still else { return };
-    inspector.ledger.add(Finding {
-        fault: Fault::LawAtRest,
-        severity: Severity::Information,
-        place: Where::At(ledger::place(plan, &look)),
-        places,
-        value: None,
-        unit: "",
-        meaning: match places {
-            1 => String::from("this segment is the only such one"),
-            _ => format!("this is the first of {places} such segments"),
-        },
-        remedy: Fault::LawAtRest.remedy(),
-    });
 }
 
 fn of_plan(fault: Fault, value: f64, limit: f64, unit: &'static str, key: &str) -> Finding {

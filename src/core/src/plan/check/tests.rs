@@ -5,8 +5,7 @@ use crate::keys::Values;
 use crate::math;
 use crate::vehicle;
 
-const ROLLING: Following =
-    Following { forward: true, reverse: true, least_speed_m_s: 0.0, pivots: false, at_rest: false };
+const ROLLING: Following = Following { forward: true, reverse: true, least_speed_m_s: 0.0 };
 
 fn terms(kind: &str, pairs: &[(&str, f64)]) -> Terms {
     let mut values = Values::default();
@@ -206,23 +205,6 @@ fn shares_and_authority_are_those_of_the_vehicle() {
     // The outer wheel is faster by the half track: 0.5 · 1.25.
     assert!(arc.peaks.iter().any(|peak| (peak.load.share() - 0.625).abs() < 1e-9));
     assert!((arc.peak_curvature_1_m - 1.0).abs() < 1e-12);
-}
-
-#[test]
-fn laws_without_feedback_at_rest_are_told_once_for_the_plan() {
-    let segments = r#"{"kind":"line","length_m":1,"speed_m_s":0.5,"end_speed_m_s":0},{"kind":"dwell","duration_s":1},
-        {"kind":"pivot","turn_rad":1,"rate_rad_s":0.5},{"kind":"line","length_m":1,"speed_m_s":0.5}"#;
-    let told = report(segments, &cart());
-    assert_eq!(told.findings.iter().filter(|finding| finding.fault == Fault::LawAtRest).count(), 1);
-    assert_eq!(
-        (found(&told, "law-at-rest").places, found(&told, "law-at-rest").at().unwrap().segment),
-        (2, 1)
-    );
-    let following = Following { pivots: true, at_rest: true, ..ROLLING };
-    assert!(!has(&report(segments, &Terms { following, ..cart() }), "law-at-rest"));
-    let following = Following { at_rest: true, ..ROLLING };
-    let told = report(segments, &Terms { following, ..cart() });
-    assert_eq!(found(&told, "law-at-rest").at().unwrap().segment, 2, "the pivot alone");
 }
 
 #[test]
