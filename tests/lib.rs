@@ -2,6 +2,7 @@
 
 pub mod drive;
 pub mod horizons;
+pub mod field;
 pub mod measured;
 pub mod programs;
 pub mod smoothing;
