@@ -3,93 +3,17 @@
 use fieldbook::client::{Client, Pace};
 use fieldbook::{orders, replay};
 use simrobot::drive::Drive;
-use std::net::SocketAddr;
-use std::path::{Path, PathBuf};
+use std::path::Path;
 use std::sync::Arc;
 use std::time::{Duration, Instant};
 use trackhold::site::Site;
 use trackhold_core::time::{SpanNs, TimeNs};
 use trackhold_core::vehicle::Vehicle;
-use trackhold_proto::blob::Digest;
-use trackhold_proto::message::{Message, Start};
-use trackhold_proto::words::{Mode, StartAt, StopKind};
+use trackhold_proto::message::Message;
+use trackhold_proto::words::{Mode, StopKind};
 use trackhold_tests::drive::DriveSocket;
-use trackhold_tests::programs::{Running, free_address, run, scratch, stdout, told};
-
-/// A long straight line: whatever a test does to the machine, it is on the way when it does.
-const LONG_LINE: &str = r#"{"format":"trackhold-plan/1","id":"long-line","revision":1,
-"start":{"x_m":0,"y_m":0,"heading_rad":0},"segments":[{"kind":"line","length_m":400,"speed_m_s":0.8}]}"#;
-
-/// A site file of a test's own: another address, another rate.
-fn site_file(folder: &Path, address: SocketAddr, rate_hz: u32) -> PathBuf {
-    let text = format!(
-        "[vehicle]\nkind = \"differential\"\nwheel_radius_m = 0.1\ntrack_width_m = 0.5\nmax_wheel_speed_rad_s = 12\n\
-         max_wheel_accel_rad_s2 = 15\n[law]\nname = \"kanayama\"\n[node]\nrate_hz = {rate_hz}\npose_timeout_s = 0.5\n\
-         command_validity_s = 0.25\n[net]\nlisten = \"{address}\"\n"
-    );
-    let path = folder.join("site.toml");
-    std::fs::write(&path, text).unwrap();
-    path
-}
-
-/// Daemon and stand-in robot as processes of their own.
-struct Field {
-    address: SocketAddr,
-    site: PathBuf,
-    folder: PathBuf,
-    daemon: Running,
-    robot: Running,
-}
-
-impl Field {
-    fn new(test: &str, rate_hz: u32) -> Self {
-        let (folder, address) = (scratch(test), free_address());
-        let site = site_file(&folder, address, rate_hz);
-        let daemon = start_daemon(&site);
-        let (to, site_path) = (address.to_string(), site.display().to_string());
-        let robot = Running::start("simrobot", &["--to", &to, "--site", &site_path]);
-        Self { address, site, folder, daemon, robot }
-    }
-
-    fn client(&self) -> Client {
-        Client::connect_to(self.address).unwrap()
-    }
-
-    /// Loads the long line and starts; returns the start order that was accepted.
-    fn drive_off(&self) -> Start {
-        let mut client = self.client();
-        if client.status().unwrap().plan == Digest::NONE {
-            let loaded = orders::send_plan(&mut client, LONG_LINE.as_bytes()).unwrap();
-            assert!(loaded.accepted(), "{loaded:?}");
-        }
-        let until = Instant::now() + Duration::from_secs(20);
-        loop {
-            let status = client.status().unwrap();
-            let answer = orders::start(&mut client, &status, status.plan, StartAt::Beginning, 0).unwrap();
-            if answer.accepted() {
-                let (boot, plan, start_number) = (status.boot, status.plan, status.start_number);
-                return Start { boot, plan, start_number, at: StartAt::Beginning, plan_time_ns: 0 };
-            }
-            assert!(Instant::now() < until, "never started: {answer:?}");
-            std::thread::sleep(Duration::from_millis(50));
-        }
-    }
-
-    fn wait_for_mode(&self, mode: Mode) {
-        let mut client = self.client();
-        let until = Instant::now() + Duration::from_secs(20);
-        while client.status().unwrap().mode != mode {
-            assert!(Instant::now() < until, "never {mode}");
-            std::thread::sleep(Duration::from_millis(20));
-        }
-    }
-}
-
-fn start_daemon(site: &Path) -> Running {
-    let daemon = Running::start("trackhold", &["run", "--config", &site.display().to_string()]);
-    daemon.wait_for("listening on");
-    daemon
-}
+use trackhold_tests::field::{Field, LONG_LINE, start_daemon};
+use trackhold_tests::programs::{Running, run, scratch, stdout, told};
 
 fn moves(command: &trackhold_proto::message::Command) -> bool {
     command.wheels[0] > 1.0

@@ -169,6 +169,44 @@ mod tests {
         }
     }
 
+    /// SplitMix64 (Steele, Lea and Flood, OOPSLA 2014).
+    fn next(state: &mut u64) -> usize {
+        *state = state.wrapping_add(0x9e37_79b9_7f4a_7c15);
+        let mixed = (*state ^ (*state >> 30)).wrapping_mul(0xbf58_476d_1ce4_e5b9);
+        ((mixed ^ (mixed >> 27)) >> 33) as usize
+    }
+
+    #[test]
+    fn altered_texts_give_a_law_or_say_what_is_wrong_with_it() {
+        const GOOD: &str = r#"{"name":"kanayama","gains":{"k_x":1.5,"k_y":9,"k_heading":6,"k_i":0.25}}"#;
+        const PUT: &[u8] = b"{}[]\",:.-+eE0159 kx_yhnul\\";
+        let (context, mut state, mut taken) = (cart(), 1, 0);
+        for round in 0..20_000 {
+            let mut text = GOOD.as_bytes().to_vec();
+            for _ in 0..=round % 4 {
+                let (at, byte) = (next(&mut state) % text.len(), PUT[next(&mut state) % PUT.len()]);
+                match next(&mut state) % 3 {
+                    0 => text[at] = byte,
+                    1 => text.insert(at, byte),
+                    _ => drop(text.remove(at)),
+                }
+            }
+            let text = String::from_utf8(text).unwrap();
+            match Tuning::build(&text, &context) {
+                Ok(tuning) => {
+                    taken += 1;
+                    let bandwidth = tuning.law().bandwidth_rad_s(1.0);
+                    assert!(bandwidth.is_finite() && bandwidth > 0.0, "{text}");
+                }
+                Err(lines) => assert!(
+                    !lines.is_empty() && lines.iter().all(|line| line.starts_with("law")),
+                    "{text}: {lines:?}"
+                ),
+            }
+        }
+        assert!(taken > 100, "{taken} texts stayed good");
+    }
+
     #[test]
     fn hostile_texts_are_refused_by_name() {
         let deep = r#"{"name":"samson","gains":{"k_1":"#.to_string() + &"[".repeat(850);
