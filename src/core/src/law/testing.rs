@@ -78,7 +78,7 @@ impl Machine {
         let input =
             Input::new(reference, &ahead, self.pose, (self.wheels, vehicle.body(&self.wheels)), seconds);
         let wanted = law.control(&input);
-        let limited = limit(vehicle, wanted.velocity, reference.curvature_1_m, &self.wheels, seconds);
+        let limited = limit(vehicle, wanted.velocity, reference.rest_curvature_1_m, &self.wheels, seconds);
         law.settle(&input, limited.speed_limited || limited.step_limited, seconds);
         self.wheels = limited.wheels;
         self.pose = self.pose.moved(limited.body, seconds);

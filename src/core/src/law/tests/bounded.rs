@@ -66,7 +66,10 @@ fn any_reference(random: &mut Random) -> Reference {
             turn_rate_rad_s: any_number(random, 30.0),
         },
         curvature_1_m: any_number(random, 100.0),
-        rest_curvature_1_m: any_number(random, 100.0),
+        rest_curvature_1_m: match random.bits() % 4 {
+            0 => random.pick(&[f64::INFINITY, f64::NEG_INFINITY]),
+            _ => any_number(random, 100.0),
+        },
         curvature_rate_1_m2: any_number(random, 100.0),
         accel_m_s2: any_number(random, 100.0),
         turn_accel_rad_s2: any_number(random, 100.0),
@@ -101,7 +104,7 @@ fn ask_anything(law: &mut dyn Law, vehicle: &dyn Vehicle, name: &str, random: &m
     let input = Input::new(reference, ahead, pose, (wheels, vehicle.body(&wheels)), seconds);
     let wanted = law.control(&input).velocity;
     assert!(wanted.is_finite(), "{name}: {law:?} wants {wanted:?} of {input:?}");
-    let limited = limit(vehicle, wanted, reference.curvature_1_m, &wheels, seconds);
+    let limited = limit(vehicle, wanted, reference.rest_curvature_1_m, &wheels, seconds);
     for (wheel, most) in limited.wheels.iter().zip(greatest) {
         assert!(wheel.abs() <= most * (1.0 + 1e-12), "{name}: {wheel} of {most} for {wanted:?}");
     }
