@@ -67,7 +67,7 @@ fn moved(pose: Pose, motion: BodyVelocity, time: SpanNs) -> Pose {
     if motion.is_zero() || time == SpanNs(0) { pose } else { pose.moved(motion, time.seconds()) }
 }
 
-/// A pose that jumped.
+/// A pose that jumped: how far the pose used is from it, with what is left of earlier jumps.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub(super) struct Jump {
     pub(super) distance_m: f64,
@@ -85,7 +85,7 @@ pub(super) struct Carrier {
     carried: (Pose, TimeNs),
     /// What of a jump is not slewed in yet: pose used minus pose carried. x and y in m, heading in rad.
     offset: Pose,
-    /// The greatest jump since the last question.
+    /// The last jump since the last question.
     jump: Option<Jump>,
 }
 
@@ -126,20 +126,19 @@ impl Carrier {
         self.carried = (self.memory.moved(estimate.pose, from, at), at.max(from));
     }
 
+    /// A jump adds to what is not slewed in yet: a machine that stands still while it is commanded to move jumps back with
+    /// every pose, and must not be taken for one that moves.
     fn take_jump(&mut self, expected: Pose, seen: Pose, params: &Params) {
-        let jump = Jump {
-            distance_m: expected.distance_to(seen),
-            heading_rad: math::wrap(expected.heading_rad - seen.heading_rad).abs(),
-        };
-        if jump.distance_m <= params.jump_distance_m && jump.heading_rad <= params.jump_heading_rad {
+        let (x_m, y_m) = (expected.x_m - seen.x_m, expected.y_m - seen.y_m);
+        let turn_rad = math::wrap(expected.heading_rad - seen.heading_rad);
+        if math::length(x_m, y_m) <= params.jump_distance_m && turn_rad.abs() <= params.jump_heading_rad {
             return;
         }
-        self.offset = Pose::new(
-            self.offset.x_m + expected.x_m - seen.x_m,
-            self.offset.y_m + expected.y_m - seen.y_m,
-            math::wrap(self.offset.heading_rad + expected.heading_rad - seen.heading_rad),
-        );
-        self.jump = Some(jump);
+        let Pose { x_m: left_x_m, y_m: left_y_m, heading_rad: left_rad } = self.offset;
+        self.offset = Pose::new(left_x_m + x_m, left_y_m + y_m, math::wrap(left_rad + turn_rad));
+        let left = self.offset;
+        self.jump =
+            Some(Jump { distance_m: math::length(left.x_m, left.y_m), heading_rad: left.heading_rad.abs() });
     }
 
     /// The pose at the moment at which a command of `at` acts, a jump slewed in as far as `seconds` allow; the pose as it

@@ -260,3 +260,22 @@ fn a_jump_of_the_estimator_is_slewed_in_or_stops_the_machine() {
     assert!(!record.has(flag::POSE_SLEWED));
     assert!((record.x_m - rig.pose.x_m).abs() < 1e-9);
 }
+
+#[test]
+fn a_machine_that_stands_while_it_is_driven_is_not_taken_for_one_that_moves() {
+    // Five poses a second, so that each differs by more than a jump from where the commands should have brought it.
+    let mut rig = with(&[], r#"{"kind":"line","length_m":20,"speed_m_s":1}"#, Pose::default());
+    assert_eq!(rig.start(), None);
+    rig.ticks(100);
+    let stuck = rig.pose;
+    rig.blind = true;
+    let stopped = (0..400).find_map(|tick| {
+        rig.pose = stuck;
+        if tick % 10 == 9 {
+            rig.send_pose(1);
+        }
+        Some(rig.tick()).filter(|record| record.mode == Mode::ProtectiveStop)
+    });
+    let stopped = stopped.expect("it stops");
+    assert_eq!((stopped.cause, stopped.command.wheels), (Cause::PoseJump, [0.0; 4]));
+}
