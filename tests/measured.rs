@@ -122,7 +122,16 @@ pub fn settings(pose_timeout_s: f64) -> Settings {
             ]),
         },
         law: LawSettings { name: "kanayama".into(), gains: Values::default() },
-        node: values(&[("rate_hz", 50.0), ("pose_timeout_s", pose_timeout_s)]),
+        // The machine on record does not answer to these commands. So its poses are not carried forward along them, none
+        // is taken for a jump because it is not where they would have brought it, and it is not asked to settle.
+        node: values(&[
+            ("rate_hz", 50.0),
+            ("pose_timeout_s", pose_timeout_s),
+            ("carry_forward", 0.0),
+            ("jump_distance_m", 100.0),
+            ("jump_heading_rad", 3.1),
+            ("settle_time_s", 0.0),
+        ]),
         pose: values(&[("heading_offset_rad", math::PI)]),
         check: Values::default(),
     }
