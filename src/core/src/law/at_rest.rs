@@ -10,7 +10,7 @@
 //! v = γ ρ cos α, ω = k α + γ cos α (sin α/α)(α + h θ); V = (α² + h θ²)/2 + λ ρ²/2 never grows. Where the place lies
 //! behind, the same holds for the machine driving backwards, with both headings turned by π.
 
-use super::Input;
+use super::{Input, Rested};
 use crate::geometry::BodyVelocity;
 use crate::math;
 use crate::vehicle::Vehicle;
@@ -41,6 +41,17 @@ pub struct RestGains {
     pub distance_m: f64,
     /// Dead band of the heading, rad.
     pub heading_rad: f64,
+}
+
+impl RestGains {
+    /// With dead bands that are at least as wide as noise asks for.
+    pub(super) fn at_least(&self, rested: &Rested) -> Self {
+        Self {
+            distance_m: self.distance_m.max(rested.least_distance_m),
+            heading_rad: self.heading_rad.max(rested.least_heading_rad),
+            ..*self
+        }
+    }
 }
 
 /// Where settling stands.

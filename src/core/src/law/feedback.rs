@@ -33,6 +33,24 @@ pub struct FeedbackParams {
     pub blend: SpanNs,
 }
 
+/// How well the machine knows where it rests.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Rested {
+    /// The smallest dead band of the position that noise leaves room for, m.
+    pub least_distance_m: f64,
+    /// The same for the heading, rad.
+    pub least_heading_rad: f64,
+    /// False while it has seen too few poses to begin to settle.
+    pub is_sure: bool,
+}
+
+/// Exactly.
+impl Default for Rested {
+    fn default() -> Self {
+        Self { least_distance_m: 0.0, least_heading_rad: 0.0, is_sure: true }
+    }
+}
+
 /// A law on its machine, with the regimes around it.
 #[derive(Debug)]
 pub struct Feedback {
@@ -42,6 +60,7 @@ pub struct Feedback {
     regime: Regime,
     ended: bool,
     settling: Settling,
+    rested: Rested,
     /// The way round that realigning has taken: 1 to the left, −1 to the right.
     turning: f64,
     blend: Blend,
@@ -63,6 +82,7 @@ impl Feedback {
             regime: Regime::None,
             ended: false,
             settling: Settling::default(),
+            rested: Rested::default(),
             turning: 0.0,
             blend: Blend::default(),
             added: BodyVelocity::ZERO,
@@ -96,7 +116,12 @@ impl Feedback {
 
     /// True once the machine has settled.
     pub fn is_settled(&self) -> bool {
-        self.regime == Regime::Settling && self.settling.is_settled()
+        self.regime == Regime::Settling && self.rested.is_sure && self.settling.is_settled()
+    }
+
+    /// Settles with poses that are known so well. Without this they count as exact.
+    pub fn rely_on(&mut self, rested: Rested) {
+        self.rested = rested;
     }
 
     /// The heading error from which on the law is not left to itself, rad.
@@ -134,9 +159,10 @@ impl Feedback {
     /// # Errors
     /// If the heading error is outside the law's domain and the machine cannot turn on the spot.
     pub fn control(&mut self, at: TimeNs, input: &Input<'_>) -> Result<Wanted, OutsideDomain> {
-        let rest = self.params.rest;
+        let rest = self.params.rest.at_least(&self.rested);
         let wanted = match self.regime {
             _ if self.law_is_in_force() => self.law.control(input),
+            Regime::Settling if !self.rested.is_sure => BodyVelocity::ZERO.into(),
             Regime::Settling if self.ended => self.settling.control(input, &*self.vehicle, &rest).into(),
             // The plan goes on soon: no manoeuvre is begun that it would cut short.
             Regime::Settling => self.settling.hold(input, &*self.vehicle, &rest).into(),

@@ -20,7 +20,7 @@ mod stanley;
 mod way;
 
 pub use design::Design;
-pub use feedback::{Feedback, FeedbackParams, OutsideDomain};
+pub use feedback::{Feedback, FeedbackParams, OutsideDomain, Rested};
 pub use input::{Ahead, Context, Input, OnPlan, Steady};
 
 use crate::geometry::BodyVelocity;

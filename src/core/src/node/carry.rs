@@ -3,9 +3,11 @@
 //! dead time later, until the next one's. Between two poses the same arcs tell where the second should be: one that is
 //! far from there is a jump of the estimator (a relocalisation), which is slewed in or stops the machine.
 
+use super::average::Average;
 use super::intake::Estimate;
 use super::params::Params;
 use crate::geometry::{BodyVelocity, Pose};
+use crate::law::Rested;
 use crate::math;
 use crate::time::{SpanNs, TimeNs};
 use alloc::vec::Vec;
@@ -87,6 +89,18 @@ pub(super) struct Carrier {
     offset: Pose,
     /// The last jump since the last question.
     jump: Option<Jump>,
+    average: Average,
+}
+
+/// What the machine was about when a pose came.
+#[derive(Clone, Copy, Debug)]
+pub(super) struct Circumstances {
+    /// The machine is driven, so that a jump has to be slewed in.
+    pub(super) moving: bool,
+    /// The pose comes from the same source as the one before.
+    pub(super) same: bool,
+    /// The reference rests, so that poses are averaged.
+    pub(super) resting: bool,
 }
 
 impl Carrier {
@@ -98,6 +112,7 @@ impl Carrier {
             carried: (Pose::default(), TimeNs(0)),
             offset: Pose::default(),
             jump: None,
+            average: Average::default(),
         }
     }
 
@@ -106,39 +121,46 @@ impl Carrier {
         self.memory.push(Commanded { at, motion });
     }
 
-    /// Takes in a new pose. `moving`: the machine is driven, so that a jump has to be slewed in; `same`: it comes from the
-    /// same source as the one before.
-    pub(super) fn seen(
-        &mut self,
-        estimate: &Estimate,
-        at: TimeNs,
-        (moving, same): (bool, bool),
-        params: &Params,
-    ) {
+    /// Takes in a new pose.
+    pub(super) fn seen(&mut self, estimate: &Estimate, at: TimeNs, about: Circumstances, params: &Params) {
         let from = TimeNs(estimate.stamp.0.saturating_sub(self.dead_time.0));
-        if let Some((pose, since)) = self.base.filter(|_| moving && same) {
-            self.take_jump(self.memory.moved(pose, since, from), estimate.pose, params);
-        }
-        if !moving {
+        let apart = self.base.map_or(SpanNs(0), |(_, since)| from.since(since));
+        let expected = self.base.filter(|_| about.moving && about.same);
+        let expected = expected.map(|(pose, since)| self.memory.moved(pose, since, from));
+        let jumped = expected.is_some_and(|expected| self.take_jump(expected, estimate.pose, params));
+        let pose = match expected.filter(|_| about.resting && params.carry_forward && !jumped) {
+            Some(expected) => self.average.with(expected, estimate, apart, params),
+            None => {
+                self.average.begin(estimate, apart, params);
+                estimate.pose
+            }
+        };
+        if !about.moving {
             self.offset = Pose::default();
         }
-        self.base = Some((estimate.pose, from));
-        self.carried = (self.memory.moved(estimate.pose, from, at), at.max(from));
+        self.base = Some((pose, from));
+        self.carried = (self.memory.moved(pose, from, at), at.max(from));
     }
 
-    /// A jump adds to what is not slewed in yet: a machine that stands still while it is commanded to move jumps back with
-    /// every pose, and must not be taken for one that moves.
-    fn take_jump(&mut self, expected: Pose, seen: Pose, params: &Params) {
+    /// How well the machine knows where it rests.
+    pub(super) fn rested(&self) -> Rested {
+        self.average.rested()
+    }
+
+    /// Whether the pose seen is a jump; then it is slewed in from now on. A jump adds to what is not slewed in yet: a machine
+    /// that stands still while it is commanded to move jumps back with every pose, and must not be taken for one that moves.
+    fn take_jump(&mut self, expected: Pose, seen: Pose, params: &Params) -> bool {
         let (x_m, y_m) = (expected.x_m - seen.x_m, expected.y_m - seen.y_m);
         let turn_rad = math::wrap(expected.heading_rad - seen.heading_rad);
         if math::length(x_m, y_m) <= params.jump_distance_m && turn_rad.abs() <= params.jump_heading_rad {
-            return;
+            return false;
         }
         let Pose { x_m: left_x_m, y_m: left_y_m, heading_rad: left_rad } = self.offset;
         self.offset = Pose::new(left_x_m + x_m, left_y_m + y_m, math::wrap(left_rad + turn_rad));
         let left = self.offset;
         self.jump =
             Some(Jump { distance_m: math::length(left.x_m, left.y_m), heading_rad: left.heading_rad.abs() });
+        true
     }
 
     /// The pose at the moment at which a command of `at` acts, a jump slewed in as far as `seconds` allow; the pose as it

@@ -3,6 +3,7 @@
 use super::clock::OffsetEstimate;
 use super::params::Params;
 use crate::geometry::{Mount, Pose};
+use crate::math;
 use crate::time::{SpanNs, TimeNs};
 use trackhold_proto::journal::{ExchangeEvent, PoseEvent, flag};
 use trackhold_proto::words::Refusal;
@@ -23,6 +24,10 @@ pub(super) struct Estimate {
     pub(super) received: TimeNs,
     /// The offset that made the stamp, ns.
     pub(super) clock_offset_ns: i64,
+    /// Standard deviation of the chassis point's position, m; 0 if the estimator states none.
+    pub(super) position_sd_m: f64,
+    /// Standard deviation of the heading, rad; 0 if the estimator states none.
+    pub(super) heading_sd_rad: f64,
 }
 
 #[derive(Clone, Debug)]
@@ -79,11 +84,14 @@ impl PoseIntake {
             _ => (OffsetEstimate::default(), false),
         };
         let clock_offset_ns = offset.observe(event.pose.measured_ns, received, params.clock_window);
+        let lever_m = math::length(mount.offset_x_m, mount.offset_y_m);
         let estimate = Estimate {
             pose: mount.chassis(Pose::new(event.pose.x_m, event.pose.y_m, event.pose.heading_rad)),
             stamp: TimeNs(event.pose.measured_ns.wrapping_add_signed(clock_offset_ns)),
             received,
             clock_offset_ns,
+            position_sd_m: math::length(event.pose.position_sd_m, lever_m * event.pose.heading_sd_rad),
+            heading_sd_rad: event.pose.heading_sd_rad,
         };
         if let Some(before) = self.estimate.filter(|_| renewed) {
             self.warnings |= warnings(&before, &estimate, top_speed_m_s, params);

@@ -15,12 +15,14 @@
 //! | `mode` | the mode table |
 //! | `successors` | plans that continue the one in force |
 //! | `carry` | the pose carried forward to the moment at which a command acts; jumps of the estimator |
+//! | `average` | poses averaged while the reference rests |
 //! | `pace` | how fast the plan's time runs |
 //! | `ahead` | what a law sees of the plan ahead |
 //! | `run` | following a plan: its clock, ramps, settling |
 //! | `tick` | one control period |
 
 mod ahead;
+mod average;
 mod carry;
 mod clock;
 mod intake;
@@ -48,7 +50,7 @@ use alloc::boxed::Box;
 use alloc::string::{String, ToString};
 use alloc::sync::Arc;
 use alloc::vec::Vec;
-use carry::Carrier;
+use carry::{Carrier, Circumstances};
 use intake::{Lease, PoseIntake};
 use mode::{Trigger, Verdict, follow};
 use orders::OrderMemory;
@@ -61,7 +63,7 @@ use trackhold_proto::journal::{
     TripEvent, TuneEvent,
 };
 use trackhold_proto::message::Command;
-use trackhold_proto::words::{Cause, Mode};
+use trackhold_proto::words::{Cause, Mode, Regime};
 use tuning::Tuning;
 
 /// What goes into the node.
@@ -288,7 +290,8 @@ impl Node {
         if let Some(estimate) = self.poses.estimate() {
             let moving = matches!(self.mode, Mode::Tracking | Mode::ControlledStop);
             let same = source == Some(event.session);
-            self.carrier.seen(estimate, self.at, (moving, same), &self.params);
+            let resting = self.feedback.regime() == Regime::Settling;
+            self.carrier.seen(estimate, self.at, Circumstances { moving, same, resting }, &self.params);
         }
     }
 

@@ -169,14 +169,14 @@ pub const KEYS: &[Key] = &[
         "m",
         0.005,
         Bound::positive(1.0),
-        "the final position is reached when it is this near; at least three of the estimator's standard deviations",
+        "the final position is reached when it is this near, or within three standard deviations of the averaged poses",
     ),
     Key::with_default(
         "settle_heading_rad",
         "rad",
         0.005,
         Bound::positive(1.0),
-        "the final heading is reached when it is this near; at least three of the estimator's standard deviations",
+        "the final heading is reached when it is this near, or within three standard deviations of the averaged poses",
     ),
     Key::with_default(
         "realign_heading_rad",

@@ -114,12 +114,15 @@ impl Node {
         record: &mut TickRecord,
     ) -> Result<BodyVelocity, Cause> {
         let since_end = self.past_end().filter(|_| self.mode == Mode::Tracking);
-        let Self { plan: Some(plan), successors, run, feedback, vehicle, params, wheels, mode, .. } = self
+        let Self {
+            plan: Some(plan), successors, run, feedback, carrier, vehicle, params, wheels, mode, ..
+        } = self
         else {
             unreachable!("a start needs a plan, and none is taken away while one is followed")
         };
         let literal = run.literal(plan);
         let error = TrackingError::between(pose, literal.pose, literal.direction);
+        feedback.rely_on(carrier.rested());
         record.regime = feedback.choose(literal.velocity, error.heading_rad, since_end.is_some());
         let holding = record.regime == Regime::Realigning;
         let bearing = Bearing { literal: &literal, vehicle: &**vehicle, params, seconds };
