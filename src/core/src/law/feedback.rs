@@ -135,7 +135,9 @@ impl Feedback {
         self.ended = ended;
         let (off, limit_rad) = (heading_error_rad.abs(), self.heading_limit_rad());
         let realigning = self.regime == Regime::Realigning;
-        let next = if off > limit_rad || realigning && off > REALIGNED_SHARE * limit_rad {
+        // On its way to the final pose a machine that turns on the spot turns as far as it has to.
+        let settles = ended && self.regime == Regime::Settling && self.vehicle.pivot_decel_rad_s2().is_some();
+        let next = if off > limit_rad && !settles || realigning && off > REALIGNED_SHARE * limit_rad {
             Regime::Realigning
         } else if motion.speed_m_s.abs() >= MOVING_M_S {
             Regime::Moving

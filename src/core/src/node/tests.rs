@@ -3,6 +3,7 @@
 mod continuing;
 mod live;
 mod regimes;
+mod settling;
 
 use super::*;
 use crate::geometry::{BodyVelocity, Pose};
