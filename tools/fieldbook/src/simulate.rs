@@ -24,7 +24,8 @@ The very core that drives the robot runs here. Without --robot the robot is idea
 next, and the chassis moves on the exact arc.
 
 Poses, errors and statistics are the true ones: the true pose of the chassis point against the reference, also where \
---robot lets the estimator see another one. With --robot, t = 0 is the moment at which its first pose arrives. Boot \
+--robot lets the estimator see another one. A tick's reference means the moment at which its command acts, \
+node.dead_time_s after the tick, and the true pose in its row is that moment's. With --robot, t = 0 is the moment at which its first pose arrives. Boot \
 identity (zeros) and seed (1) are fixed: the same run has the same digest everywhere.
 
 Exit codes: 0 it ran, whatever it reached; 2 it could not, or the start was refused.";

@@ -1,10 +1,12 @@
 //! Closed loop in the core, tick by tick: the very node that drives a robot, and a world that it moves in.
 //!
 //! At tick k, t_k = round(k·10⁹/rate) ns, the poses that have arrived come first, then the tick; its command holds until
-//! tick k+1. Boot identity, seed and sessions are fixed, so that the same run has the same digest everywhere. Nothing is
+//! tick k+1. A tick's reference means the moment at which its command acts, `node.dead_time_s` later: it is held against the
+//! true pose of that moment, and its row comes then. Boot identity, seed and sessions are fixed, so that the same run has the same digest everywhere. Nothing is
 //! allocated in a tick.
 
 pub mod csv;
+mod due;
 pub mod observe;
 pub mod robot;
 pub mod world;
@@ -12,9 +14,10 @@ pub mod world;
 pub use observe::{Observer, Row};
 pub use world::{Ideal, World};
 
+use due::Due;
 use std::fmt;
 use trackhold_core::digest;
-use trackhold_core::geometry::{Direction, Mount, Pose, TrackingError};
+use trackhold_core::geometry::{Mount, Pose};
 use trackhold_core::keys::Problem;
 use trackhold_core::math;
 use trackhold_core::node::{Event, Node, Sink};
@@ -22,7 +25,7 @@ use trackhold_core::plan;
 use trackhold_core::settings::Settings;
 use trackhold_core::time::{SpanNs, TimeNs, tick_offset};
 use trackhold_proto::blob::BootId;
-use trackhold_proto::journal::{Body, Entry, Order, OrderEvent, PlanEvent, TickRecord, flag};
+use trackhold_proto::journal::{Body, Entry, Order, OrderEvent, PlanEvent, TickRecord};
 use trackhold_proto::message::{Start, WheelLayout};
 use trackhold_proto::words::{Cause, Mode, Refusal, StartAt};
 
@@ -60,7 +63,7 @@ pub struct Outcome {
     pub mode: Mode,
     /// Why the node is in that mode.
     pub cause: Cause,
-    /// Where the chassis point truly was at the last tick.
+    /// Where the chassis point truly was when the last tick's command acted.
     pub truth: Pose,
 }
 
@@ -133,7 +136,9 @@ pub fn simulate_in<W: World>(
     let (origin, rate_hz) = (world.origin(), node.params().rate_hz);
     let mut k = 0;
     let mut at = origin;
+    let mut due = Due::new(node.params());
     loop {
+        due.give(&mut world, at, tap.observer);
         world.advance(at, &mut |arrival| {
             node.handle(TimeNs(arrival.received_ns), arrival.into_event(), &mut tap)
         });
@@ -141,13 +146,14 @@ pub fn simulate_in<W: World>(
             start(&mut node, at, &mut tap)?;
         }
         node.handle(at, Event::Tick, &mut tap);
-        let (record, truth) = (&tap.record, world.truth());
-        let t = at.since(origin);
-        tap.observer.row(&Row { t, truth, error: error(record, truth, W::EXACT), record });
+        let (t, record) = (at.since(origin), tap.record);
+        due.tick(at, t, record);
+        due.give(&mut world, at, tap.observer);
         world.command(at, &record.command);
         let next = origin + tick_offset(k + 1, rate_hz);
         let over = !matches!(record.mode, Mode::Tracking | Mode::ControlledStop);
         if over || next.since(origin).seconds() > limit_s {
+            let truth = due.finish(&mut world, tap.observer);
             return Ok(Outcome { ticks: k + 1, duration: t, mode: record.mode, cause: record.cause, truth });
         }
         (k, at) = (k + 1, next);
@@ -209,20 +215,6 @@ fn start<O: Observer>(node: &mut Node, at: TimeNs, tap: &mut Tap<'_, O>) -> Resu
         OrderEvent { session: OPERATOR_SESSION, sequence: 1, received_ns: at.0, order: Order::Start(order) };
     node.handle(at, Event::Order(event), tap);
     tap.refused.take().map_or(Ok(()), Err)
-}
-
-/// The true tracking error; none where the tick has no reference. `exact`: the node saw the true pose, and its record has
-/// that error already.
-fn error(record: &TickRecord, truth: Pose, exact: bool) -> Option<TrackingError> {
-    if !record.has(flag::HAS_REFERENCE) {
-        return None;
-    }
-    if exact {
-        let (along_m, cross_m) = (record.along_error_m, record.cross_error_m);
-        return Some(TrackingError { along_m, cross_m, heading_rad: record.heading_error_rad });
-    }
-    let reference = Pose::new(record.ref_x_m, record.ref_y_m, record.ref_heading_rad);
-    Some(TrackingError::between(truth, reference, Direction::of(reference.heading_rad)))
 }
 
 /// True if the estimator's point is the chassis point, and its axis the chassis'.

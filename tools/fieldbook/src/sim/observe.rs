@@ -10,11 +10,11 @@ use trackhold_proto::journal::{Entry, TickRecord};
 /// One tick of a run.
 #[derive(Clone, Copy, Debug)]
 pub struct Row<'a> {
-    /// Since the first tick.
+    /// When the tick was, since the first one.
     pub t: SpanNs,
-    /// Where the chassis point truly is.
+    /// Where the chassis point truly is when the tick's command acts, `node.dead_time_s` after the tick.
     pub truth: Pose,
-    /// The true pose minus the reference, in the reference's frame; none where the tick has no reference.
+    /// That pose minus the reference, which means the same moment, in the reference's frame; none where the tick has no reference.
     pub error: Option<TrackingError>,
     /// The node's own record: what it saw, wanted and commanded.
     pub record: &'a TickRecord,
@@ -25,7 +25,7 @@ pub trait Observer {
     /// An entry of the journal.
     fn entry(&mut self, _entry: &Entry) {}
 
-    /// A tick, after its entries.
+    /// A tick, after its entries; with dead time also after those of the ticks until its command acts.
     fn row(&mut self, _row: &Row<'_>) {}
 }
 

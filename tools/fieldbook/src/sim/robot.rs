@@ -115,7 +115,7 @@ impl World for StandIn {
         self.robot.command(at, &command.wheels);
     }
 
-    fn truth(&self) -> Pose {
-        self.robot.plant().pose()
+    fn truth_at(&mut self, at: TimeNs) -> Pose {
+        self.robot.advance(at)
     }
 }

@@ -55,8 +55,8 @@ pub trait World {
     /// Takes in a command.
     fn command(&mut self, at: TimeNs, command: &Command);
 
-    /// Where the chassis point truly is.
-    fn truth(&self) -> Pose;
+    /// Moves on to a moment without delivering anything, and tells where the chassis point truly is then.
+    fn truth_at(&mut self, at: TimeNs) -> Pose;
 }
 
 /// The ideal robot: it does at once and exactly what it is told, and its estimator knows the pose at every tick.
@@ -85,8 +85,7 @@ impl World for Ideal {
     }
 
     fn advance(&mut self, to: TimeNs, deliver: &mut impl FnMut(Arrival)) {
-        self.pose = self.pose.moved(self.velocity, to.since(self.at).seconds());
-        self.at = to;
+        self.truth_at(to);
         self.sequence += 1;
         let seen = if self.plain { self.pose } else { self.mount.estimator(self.pose) };
         let pose = message::Pose {
@@ -105,7 +104,11 @@ impl World for Ideal {
             BodyVelocity { speed_m_s: command.speed_m_s, turn_rate_rad_s: command.turn_rate_rad_s };
     }
 
-    fn truth(&self) -> Pose {
+    fn truth_at(&mut self, at: TimeNs) -> Pose {
+        if at > self.at {
+            self.pose = self.pose.moved(self.velocity, at.since(self.at).seconds());
+            self.at = at;
+        }
         self.pose
     }
 }

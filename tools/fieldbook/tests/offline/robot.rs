@@ -4,6 +4,7 @@ use crate::common::{Rows, case_named};
 use fieldbook::sim::{self, Options, SimError};
 use simrobot::RobotSpec;
 use trackhold_core::digest::ResultDigest;
+use trackhold_core::geometry::Pose;
 use trackhold_proto::words::{Cause, Mode, Refusal};
 
 fn robot(text: &str) -> RobotSpec {
@@ -72,4 +73,26 @@ fn a_robot_that_does_not_fit_and_one_without_poses_are_refused() {
     };
     assert!(matches!(run("[drive]\nsteer_lag_s = 0.1"), SimError::Robot(_)));
     assert_eq!(run("[sensor]\ndropout_probability = 1"), SimError::Start(Refusal::NoPose));
+}
+
+#[test]
+fn a_row_holds_the_true_pose_of_the_moment_that_its_reference_means() {
+    let case = case_named("kanayama-unicycle");
+    let mut settings = case.settings.clone();
+    settings.node.set("dead_time_s", 0.1);
+    let spec = robot("[drive]\ndead_time_s = 0.1\n[sensor]\nrate_hz = 50");
+    let mut rows = Rows::default();
+    let options = Options { start: None, seconds: Some(8.0) };
+    let outcome = sim::robot::simulate(&settings, &case.plan, &options, &spec, &mut rows).unwrap();
+    assert_eq!(rows.0.len() as u64, outcome.ticks, "also the ticks whose command acts after the last one");
+    assert_eq!(rows.0.last().unwrap().truth, outcome.truth);
+    for (index, row) in rows.0.iter().enumerate().skip(200) {
+        // The machine does what the node reckons with, so that it is where the node took it to be, and near the reference.
+        let seen = Pose::new(row.record.x_m, row.record.y_m, row.record.heading_rad);
+        assert!(row.truth.distance_to(seen) < 1e-6, "at {} s: {:?} {seen:?}", row.t_s, row.truth);
+        assert!((row.t_s - index as f64 / 50.0).abs() < 1e-9);
+        let error = row.error.unwrap();
+        let (off_m, late_m) = (error.along_m.hypot(error.cross_m), 0.1 * row.record.ref_speed_m_s);
+        assert!(off_m < 0.1 * late_m, "at {} s: {off_m} m, the dead time is {late_m} m of way", row.t_s);
+    }
 }
