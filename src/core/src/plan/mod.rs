@@ -259,7 +259,7 @@ impl Plan {
     }
 
     fn slot_at(&self, t_s: f64, cursor: usize) -> usize {
-        for index in [cursor, cursor + 1] {
+        for index in [cursor, cursor.saturating_add(1)] {
             let begun = self.slots.get(index).is_some_and(|slot| slot.begin_s <= t_s);
             if begun && self.slots.get(index + 1).is_none_or(|next| t_s < next.begin_s) {
                 return index;
