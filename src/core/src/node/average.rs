@@ -5,7 +5,7 @@
 //! settling's dead band of the standard deviation s that the estimator states, s √(w/(2 − w)). That is the mean over no
 //! more than about a second, so that what the commands do not tell (slip, a dead time that is not stated) is seen in time.
 //! Where that is too little, the dead band grows to three of the standard deviations that are left. A pose that states no
-//! standard deviation counts as exact: it is taken as it is.
+//! standard deviation counts as exact: it is taken as it is. So is every pose where poses are not carried forward.
 
 use super::intake::Estimate;
 use super::params::Params;
@@ -92,8 +92,12 @@ impl Average {
     }
 
     fn note(&mut self, estimate: &Estimate, apart: SpanNs, params: &Params) -> (Share, Share) {
-        let place = Share::new(estimate.position_sd_m, params.settle_distance_m, apart);
-        let heading = Share::new(estimate.heading_sd_rad, params.settle_heading_rad, apart);
+        let share = |sd, band| {
+            // Without carrying forward nothing tells where the machine should be now.
+            if params.carry_forward { Share::new(sd, band, apart) } else { Share { steady: 1.0, left: sd } }
+        };
+        let place = share(estimate.position_sd_m, params.settle_distance_m);
+        let heading = share(estimate.heading_sd_rad, params.settle_heading_rad);
         let poses = f64::from(self.poses);
         self.rested = Rested {
             least_distance_m: BAND_SDS * place.left,
