@@ -70,10 +70,9 @@ impl Pace {
         let (fall, rise) = bearing.slopes_1_s();
         let (down, up) = (fall * bearing.seconds, rise * bearing.seconds);
         let rate = if wanted < self.rate { wanted.max(self.rate - down) } else { wanted.min(self.rate + up) };
-        let resting = bearing.literal.velocity.is_zero();
-        let change_1_s =
-            if rate == self.rate || resting { 0.0 } else { (rate - self.rate) / bearing.seconds };
-        Self { rate, change_1_s }
+        // An endless slope is that of a reference that rests: nothing speeds up where its rate steps.
+        let steps = rate == self.rate || fall == f64::INFINITY;
+        Self { rate, change_1_s: if steps { 0.0 } else { (rate - self.rate) / bearing.seconds } }
     }
 
     /// The pace of the next tick on a stop's ramp: as above, but from the first tick on, whatever the cap.

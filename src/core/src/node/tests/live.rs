@@ -33,6 +33,26 @@ fn a_cap_out_of_bounds_or_repeated_changes_nothing() {
     assert_eq!(rig.tick().speed_cap, 0.05);
 }
 
+#[test]
+fn a_cap_at_a_crawl_leaves_the_record_finite_however_near_two_ticks_are() {
+    for later_ns in [0, 1, 1000] {
+        let mut rig = Rig::new(&[("rate_hz", RATE_HZ)]);
+        let line = r#"{"kind":"line","length_m":4,"profile":"trapezoid","speed_m_s":1,"accel_m_s2":0.5}"#;
+        assert_eq!(rig.load(line, false), None);
+        rig.send_pose(1);
+        // A microsecond after its beginning the reference moves with 0.5 µm/s.
+        let start = Start { at: StartAt::PlanTime, plan_time_ns: 1000, ..rig.start_order() };
+        rig.event(Event::Tick);
+        assert_eq!(rig.order(Order::Start(start)), None);
+        assert_eq!(rig.order(Order::Cap { share: 0.5 }), None);
+        rig.at = TimeNs(rig.at.0 + later_ns);
+        rig.event(Event::Tick);
+        let record = rig.records().next_back().unwrap();
+        assert!(record.ref_speed_m_s > 0.0, "{}", record.ref_speed_m_s);
+        assert!(record.ref_accel_m_s2.abs() < 1.0, "{} m/s² after {later_ns} ns", record.ref_accel_m_s2);
+    }
+}
+
 impl Rig {
     fn tune(&mut self, law: &str) -> Option<Refusal> {
         self.sequence += 1;
