@@ -125,10 +125,12 @@ impl Carrier {
     pub(super) fn seen(&mut self, estimate: &Estimate, at: TimeNs, about: Circumstances, params: &Params) {
         let from = TimeNs(estimate.stamp.0.saturating_sub(self.dead_time.0));
         let apart = self.base.map_or(SpanNs(0), |(_, since)| from.since(since));
-        let expected = self.base.filter(|_| about.moving && about.same);
+        // Under way another source's pose is held against the last one's as well: the machine cannot be in two places.
+        let expected = self.base.filter(|_| about.moving);
         let expected = expected.map(|(pose, since)| self.memory.moved(pose, since, from));
         let jumped = expected.is_some_and(|expected| self.take_jump(expected, estimate.pose, params));
-        let pose = match expected.filter(|_| about.resting && params.carry_forward && !jumped) {
+        let averages = about.resting && about.same && params.carry_forward && !jumped;
+        let pose = match expected.filter(|_| averages) {
             Some(expected) => self.average.with(expected, estimate, apart, params),
             None => {
                 self.average.begin(estimate, apart, params);

@@ -4,6 +4,7 @@ mod continuing;
 mod live;
 mod regimes;
 mod settling;
+mod sources;
 
 use super::*;
 use crate::geometry::{BodyVelocity, Pose};
