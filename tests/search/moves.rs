@@ -98,7 +98,7 @@ pub(crate) enum Move {
     /// A pose out of all range.
     PoseOutOfRange,
     /// A pose from a source that does not hold the lease.
-    PoseElsewhere,
+    PoseElsewhere(Place),
     /// An exchange of stamps with the pose source.
     Exchange,
     /// A start.
@@ -169,7 +169,8 @@ const PLACES: &[Move] = &[
     Move::Pose(Place::Farther),
     Move::Pose(Place::Turned),
     Move::PoseOutOfRange,
-    Move::PoseElsewhere,
+    Move::PoseElsewhere(Place::On),
+    Move::PoseElsewhere(Place::Far),
     Move::Start(StartKind::Nearest),
 ];
 
@@ -179,7 +180,7 @@ const TIMES: &[Move] = &[
     Move::EarlyTick,
     Move::PoseOld,
     Move::PoseRepeated,
-    Move::PoseElsewhere,
+    Move::PoseElsewhere(Place::On),
     Move::Exchange,
     Move::Trip(Cause::Shutdown),
 ];

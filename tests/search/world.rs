@@ -8,7 +8,6 @@ use crate::judge::{Asked, Broken, Judge, drives};
 use crate::moves::{LawKind, Move, Place, PlanKind, StartKind};
 use crate::setup::{PERIOD, POSE_TIMEOUT, Setup, continuing};
 use trackhold_core::digest;
-use trackhold_core::geometry::Pose;
 use trackhold_core::math::PI;
 use trackhold_core::node::tuning::Tuning;
 use trackhold_core::node::{Event, Node};
@@ -86,11 +85,11 @@ impl<'a> World<'a> {
             Move::Tick => self.tick(self.at),
             Move::LateTick => self.tick(self.at + PERIOD + PERIOD),
             Move::EarlyTick => self.give(self.at, Event::Tick),
-            Move::Pose(place) => self.pose(place),
+            Move::Pose(place) => self.send_pose(self.source, place),
             Move::PoseOld => self.stamped(self.at.0 - POSE_TIMEOUT.0 - PERIOD.0, |_| ()),
             Move::PoseRepeated => self.stamped(0, |_| ()),
             Move::PoseOutOfRange => self.stamped(self.at.0 + self.poses, |pose| pose.x_m = 1e9),
-            Move::PoseElsewhere => self.pose_elsewhere(),
+            Move::PoseElsewhere(place) => self.send_pose(self.other_source(), place),
             Move::Exchange => self.exchange(),
             Move::Start(StartKind::Repeated) => self.repeat_start(),
             Move::Start(kind) => self.start(kind),
@@ -140,28 +139,25 @@ impl<'a> World<'a> {
         plan.at(t_s, &mut 0).pose.x_m
     }
 
-    fn pose(&mut self, place: Place) -> Result<(), Broken> {
-        let turned = place == Place::Turned;
-        let pose = Pose::new(self.place_m(), place.left_m(), if turned { PI } else { 0.0 });
-        self.send_pose(self.source, pose, self.at.0)
-    }
-
-    fn send_pose(&mut self, session: u64, pose: Pose, measured_ns: u64) -> Result<(), Broken> {
+    fn send_pose(&mut self, session: u64, place: Place) -> Result<(), Broken> {
         self.poses += 1;
         let pose = message::Pose {
             // Two poses of a moment rise by nanoseconds.
-            measured_ns: measured_ns + self.poses,
-            x_m: pose.x_m,
-            y_m: pose.y_m,
-            heading_rad: pose.heading_rad,
+            measured_ns: self.at.0 + self.poses,
+            x_m: self.place_m(),
+            y_m: place.left_m(),
+            heading_rad: if place == Place::Turned { PI } else { 0.0 },
             position_sd_m: 0.0,
             heading_sd_rad: 0.0,
         };
-        let event = PoseEvent { session, sequence: self.poses, received_ns: self.at.0, pose };
+        self.give_pose(PoseEvent { session, sequence: self.poses, received_ns: self.at.0, pose })
+    }
+
+    fn give_pose(&mut self, event: PoseEvent) -> Result<(), Broken> {
         let taken = self.judge.poses_taken();
         self.give(self.at, Event::Pose(event))?;
         if self.judge.poses_taken() > taken {
-            (self.last_pose, self.source) = (Some(event), session);
+            (self.last_pose, self.source) = (Some(event), event.session);
         }
         Ok(())
     }
@@ -175,17 +171,12 @@ impl<'a> World<'a> {
             event.pose.measured_ns = measured_ns + self.poses;
         }
         change(&mut event.pose);
-        let taken = self.judge.poses_taken();
-        self.give(self.at, Event::Pose(event))?;
-        if self.judge.poses_taken() > taken {
-            self.last_pose = Some(event);
-        }
-        Ok(())
+        self.give_pose(event)
     }
 
-    fn pose_elsewhere(&mut self) -> Result<(), Broken> {
-        let other = if self.source == SOURCES[0] { SOURCES[1] } else { SOURCES[0] };
-        self.send_pose(other, Pose::new(self.place_m(), 0.0, 0.0), self.at.0)
+    /// The source whose poses are not taken.
+    fn other_source(&self) -> u64 {
+        if self.source == SOURCES[0] { SOURCES[1] } else { SOURCES[0] }
     }
 
     fn exchange(&mut self) -> Result<(), Broken> {

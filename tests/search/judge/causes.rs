@@ -99,7 +99,7 @@ impl Causes {
     /// Whether the pose that this tick sees is too far from the one that the last tick saw.
     fn jumped(&self) -> bool {
         let (Some(pose), Some(seen_m)) = (self.pose, self.seen_m) else { return false };
-        self.source == Some(pose.session) && (pose.pose.y_m - seen_m).abs() > JUMP_STOP_M + MOVED_M
+        (pose.pose.y_m - seen_m).abs() > JUMP_STOP_M + MOVED_M
     }
 
     fn see(&mut self, heard: &Heard<'_>) {
