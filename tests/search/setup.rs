@@ -26,7 +26,9 @@ pub(crate) const JUMP_STOP_RAD: f64 = 0.8;
 /// The greatest value of a command's number, and its greatest change in a second.
 #[derive(Clone, Copy, Debug)]
 pub(crate) struct Bounds {
+    /// In the number's own unit, m/s, rad/s or rad.
     pub(crate) greatest: f64,
+    /// That unit in a second.
     pub(crate) change_1_s: f64,
 }
 
@@ -35,6 +37,7 @@ pub(crate) struct Bounds {
 pub(crate) struct Setup {
     /// Its name, for people.
     pub(crate) name: &'static str,
+    /// The node's settings.
     pub(crate) settings: Settings,
     /// The bounds of the command's two numbers.
     pub(crate) bounds: [Bounds; 2],

@@ -1,15 +1,16 @@
 //! The abstract state: what of a node's past decides what may come.
 //!
-//! Two pasts with one abstract state have the same successors under every move: the search tries more than one past of each
-//! state and compares (see `explore`). Kept are
+//! Two pasts with one abstract state have to have the same successors under every move: the search tries two pasts of each
+//! state and compares (see `explore`). That is a test, not a proof: a third past could differ where two agree. Kept are
 //!
 //! - mode and cause, for the table and for what a reset looks at;
 //! - the plan in force, the plans that wait, and, while one is followed, the place on it and the pace: they decide when the
 //!   run ends, dries up, goes over to the next plan, rests;
-//! - the pose: where, how old by its stamp and by its arrival (in ticks, up to the one that is too old: fresh or stale,
-//!   lease held or not), and where the last tick saw it: what arrived since may be a jump;
-//! - whether the last accepted start and reset are remembered, and whether that start's number is in force;
-//! - the speed commanded, for ramps take ticks; the cap, the law.
+//! - the pose: where, how old by its stamp and by its arrival, in ticks (fresh or stale, lease held or not), and where the
+//!   last tick saw it: what arrived since may be a jump;
+//! - what the node remembers under the numbers of the last accepted start and reset, and whether that start's number and
+//!   plan are in force;
+//! - the speed commanded and how long ramps last, for they take ticks; the cap, the law.
 //!
 //! Left out are absolute times, sequence numbers, entry numbers, revisions, which of two sources or start numbers it is:
 //! none is compared with anything but its own kind. A place on a plan that is not followed is left out too: every start
