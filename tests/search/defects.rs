@@ -1,5 +1,5 @@
-//! Canaries: nodes that do wrong on purpose, each of which the search has to catch by the rule that it breaks. They stand
-//! between world and node, and alter what goes in or what comes out.
+//! Canaries: nodes that do wrong on purpose, each of which the search has to catch by the rule that it breaks. They
+//! stand between world and node, and alter what goes in or what comes out.
 
 use crate::judge::{Asked, drives};
 use trackhold_core::node::{Event, Node};

@@ -1,8 +1,8 @@
 //! The search: breadth first over abstract states, every move in every state.
 //!
-//! A node cannot be copied, so a state is kept as the shortest moves that lead to it, and made again from the beginning for
-//! each move that is tried. Of each state a second past is kept too, one that came another way, and tried in the same way:
-//! its successors have to be those of the first, or the abstraction leaves something out.
+//! A node cannot be copied, so a state is kept as the shortest moves that lead to it, and made again from the
+//! beginning for each move that is tried. Of each state a second past is kept too, one that came another way, and
+//! tried in the same way: its successors have to be those of the first, or the abstraction leaves something out.
 
 use crate::defects::Defect;
 use crate::judge::Broken;
@@ -37,6 +37,8 @@ struct Past {
 pub(crate) struct Found {
     pub(crate) states: usize,
     pub(crate) transitions: usize,
+    /// True if nothing was left to try.
+    pub(crate) complete: bool,
     /// The longest of the shortest ways to a state, moves.
     pub(crate) depth: usize,
     /// States of which a second past was tried.
@@ -69,6 +71,11 @@ struct Search<'a> {
 
 /// Searches until nothing new is found or a rule is broken.
 pub(crate) fn explore(setup: &Setup, scope: Scope, defect: Defect) -> Found {
+    explore_up_to(usize::MAX, setup, scope, defect)
+}
+
+/// The same, but no further once so many transitions were tried.
+pub(crate) fn explore_up_to(most: usize, setup: &Setup, scope: Scope, defect: Defect) -> Found {
     let mut search = Search {
         setup,
         moves: scope.moves(),
@@ -83,10 +90,11 @@ pub(crate) fn explore(setup: &Setup, scope: Scope, defect: Defect) -> Found {
     let first = World::new(setup, defect);
     search.arrive(&first, None, None);
     let mut next = 0;
-    while next < search.pasts.len() && search.found.broken.is_none() {
+    while next < search.pasts.len() && search.found.broken.is_none() && search.found.transitions < most {
         search.try_all(next);
         next += 1;
     }
+    search.found.complete = next == search.pasts.len();
     search.finish()
 }
 

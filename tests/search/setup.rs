@@ -1,5 +1,5 @@
-//! The machines, numbers and plans that are searched, chosen so that the search closes: ten ticks a second, and limits with
-//! which every pace and speed is one of a few. What a tick does is the node's own business all the same.
+//! The machines, numbers and plans that are searched, chosen so that the search closes: ten ticks a second, and
+//! limits with which every pace and speed is one of a few. What a tick does is the node's own business all the same.
 
 use crate::moves::PlanKind;
 use crate::table::ModeTable;

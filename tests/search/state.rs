@@ -1,7 +1,8 @@
 //! The abstract state: what of a node's past decides what may come.
 //!
-//! Two pasts with one abstract state have to have the same successors under every move: the search tries two pasts of each
-//! state and compares (see `explore`). That is a test, not a proof: a third past could differ where two agree. Kept are
+//! Two pasts with one abstract state have to have the same successors under every move: the search tries two pasts of
+//! each state and compares (see `explore`). That is a test, not a proof: a third past could differ where two agree.
+//! Kept are
 //!
 //! - mode and cause, for the table and for what a reset looks at;
 //! - the plan in force, the plans that wait, and, while one is followed, the place on it and the pace: they decide when the
@@ -12,9 +13,9 @@
 //!   plan are in force;
 //! - the speed commanded and how long ramps last, for they take ticks; the cap, the law.
 //!
-//! Left out are absolute times, sequence numbers, entry numbers, revisions, which of two sources or start numbers it is:
-//! none is compared with anything but its own kind. A place on a plan that is not followed is left out too: every start
-//! sets it.
+//! Left out are absolute times, sequence numbers, entry numbers, revisions, which of two sources or start numbers it
+//! is: none is compared with anything but its own kind. A place on a plan that is not followed is left out too: every
+//! start sets it.
 
 use crate::judge::drives;
 use crate::moves::PlanKind;
@@ -52,8 +53,8 @@ pub(crate) struct Running {
     wheels: [i64; 2],
     /// Where the plans that wait begin, from the plan time reached, 10 ms.
     waiting: Vec<u64>,
-    /// Where the last tick saw the machine, cm to the left, and whether by another source's eyes.
-    seen: Option<i64>,
+    /// Where the last tick saw the machine, cm to the left, and whether turned round; and whether by another source's eyes.
+    seen: Option<(i64, bool)>,
     other_source: bool,
     /// Ticks in the controlled stop: one that never ends must not look like one that lasts.
     ramp_ticks: u32,
@@ -151,7 +152,7 @@ impl Running {
             slews: last.is_some_and(|record| record.has(flag::POSE_SLEWED)),
             wheels: judge.ticks_to_zero(),
             waiting: judge.waiting().iter().map(away).collect(),
-            seen: judge.seen_m().map(|seen_m| rounded(seen_m * 1e2)),
+            seen: judge.seen().map(|(left_m, heading_rad)| (rounded(left_m * 1e2), heading_rad != 0.0)),
             other_source: judge.changed_source(),
             ramp_ticks: judge.ramp_ticks(),
         }

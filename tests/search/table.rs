@@ -1,4 +1,5 @@
-//! The mode table as the core documents it, read as text: what the search holds the node against is the page, not the code.
+//! The mode table as the core documents it, read as text: what the search holds the node against is the page, not the
+//! code.
 
 use trackhold_core::node::mode::{Trigger, Verdict};
 use trackhold_proto::words::Mode;

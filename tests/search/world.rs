@@ -1,7 +1,8 @@
 //! One node, the world around it, and its judge: makes a move by handing the node the event that stands for it.
 //!
-//! Poses come from a finite set of places beside the coming tick's reference, instead of from a machine that is moved by
-//! what is commanded: so nothing but the moves decides what the node sees, and runs that mean the same are the same.
+//! Poses come from a finite set of places beside the coming tick's reference, instead of from a machine that is moved
+//! by what is commanded: so nothing but the moves decides what the node sees, and runs that mean the same are the
+//! same.
 
 use crate::defects::{Canary, Defect};
 use crate::judge::{Asked, Broken, Judge, drives};

@@ -16,8 +16,8 @@ pub(super) struct Causes {
     /// The last pose that was taken, and how many were.
     pose: Option<PoseEvent>,
     taken: u64,
-    /// The lateral place that the last tick saw.
-    seen_m: Option<f64>,
+    /// What the last tick saw: how far to the left, and the heading.
+    seen: Option<(f64, f64)>,
     /// The source of the poses at that tick.
     source: Option<u64>,
     plan: Option<PlanLoaded>,
@@ -37,7 +37,7 @@ impl Causes {
         Self {
             pose: None,
             taken: 0,
-            seen_m: None,
+            seen: None,
             source: None,
             plan: None,
             waiting: Vec::new(),
@@ -92,13 +92,13 @@ impl Causes {
     }
 
     fn see_pose(&mut self) {
-        self.seen_m = self.pose.map(|pose| pose.pose.y_m);
+        self.seen = self.pose.map(|pose| (pose.pose.y_m, pose.pose.heading_rad));
         self.source = self.pose.map(|pose| pose.session);
     }
 
     /// Whether the pose that this tick sees is too far from the one that the last tick saw.
     fn jumped(&self) -> bool {
-        let (Some(pose), Some(seen_m)) = (self.pose, self.seen_m) else { return false };
+        let (Some(pose), Some((seen_m, _))) = (self.pose, self.seen) else { return false };
         (pose.pose.y_m - seen_m).abs() > JUMP_STOP_M + MOVED_M
     }
 
@@ -176,9 +176,9 @@ impl Judge {
         self.causes.source != self.causes.pose.map(|pose| pose.session)
     }
 
-    /// The lateral place that the last tick saw, m.
-    pub(crate) fn seen_m(&self) -> Option<f64> {
-        self.causes.seen_m
+    /// What the last tick saw: how far to the left, m, and the heading, rad.
+    pub(crate) fn seen(&self) -> Option<(f64, f64)> {
+        self.causes.seen
     }
 
     /// The plan times at which plans that wait begin, ns.
